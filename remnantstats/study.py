@@ -7,7 +7,7 @@ import json
 import platform
 import time
 from collections.abc import Callable
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, dataclass, field, replace
 from html import escape
 from importlib.metadata import version
 from pathlib import Path
@@ -18,10 +18,12 @@ import numpy.typing as npt
 import pandas as pd
 
 from .catalog import Sample, read_sample
+from .errors import Fault, InputError
 from .files import atomic_path, make_folder, write_text
-from .inference import Fit, fit_problem
+from .inference Fit, fit_problem
+from .inference.compare import Comparison, compare
 from .mission import MissionSize, size_mission, write_mission
-from .occurrence import OccurrencePrior, occurrence_prior, write_prior
+from .occurrence import OccurrencePrior, TransferSettings, occurrence_prior, write_prior
 from .population import PopulationModel, Problem, pose
 from .stages import StageStore
 from .study_file import Study, load_study
@@ -50,6 +52,8 @@ class RunResult:
         Where the outputs are.
     files : tuple of pathlib.Path
     seconds : dict of str to float
+    comparison : Comparison or None
+        Where the study names several models.
     """
 
     study: Study
@@ -60,6 +64,7 @@ class RunResult:
     folder: Path
     files: tuple[Path, ...] = ()
     seconds: dict[str, float] = field(default_factory=dict)
+    comparison: Comparison | None = None
 
     @property
     def fit(self) -> Fit:
@@ -169,8 +174,12 @@ def infer_study(
     fits = tuple(_fit(study, sample, problem, store, quick, say) for problem in problems)
     for name, spent in fits[0].timings.items():
         seconds[name] = spent
-    result = RunResult(study, sample, fits, None, None, folder, (), seconds)
-    return RunResult(study, sample, fits, None, None, folder, tuple(_write_fit(result)), seconds)
+    comparison = None
+    if len(fits) > 1:
+        say("comparison of models")
+        comparison = compare(fits, study.file.seed)
+    result = RunResult(study, sample, fits, None, None, folder, (), seconds, comparison)
+    return replace(result, files=tuple(_write_fit(result)))
 
 
 def _fit(study: Study, sample: Sample, problem: Problem, store: StageStore, quick: bool, say: Progress) -> Fit:
@@ -227,7 +236,7 @@ def run(
     start = time.perf_counter()
     if study.transfer is not None:
         say("occurrence prior")
-        prior = occurrence_prior(done.fit, study.transfer, seed=study.file.seed)
+        prior = _occurrence(done, study.transfer)
         files += write_prior(prior, folder, done.fit.marks)
         seconds["occurrence prior"] = time.perf_counter() - start
     if study.mission is not None and prior is not None:
@@ -238,12 +247,37 @@ def run(
         seconds["mission size"] = time.perf_counter() - start
     say("report")
     start = time.perf_counter()
-    result = RunResult(study, done.sample, done.fits, prior, plan, folder, tuple(files), seconds)
+    result = replace(done, prior=prior, plan=plan, files=tuple(files), seconds=seconds)
     files.append(_write_report(result))
     seconds["report"] = time.perf_counter() - start
-    result = RunResult(study, done.sample, done.fits, prior, plan, folder, tuple(files), seconds)
-    files.append(_write_record(result))
-    return RunResult(study, done.sample, done.fits, prior, plan, folder, tuple(files), seconds)
+    _write_record(result)
+    return replace(result, files=tuple(files))
+
+
+def _occurrence(done: RunResult, transfer: TransferSettings) -> OccurrencePrior:
+    """Carry the leading model's fraction, or the stacked one where the study asks for it."""
+    seed = done.study.file.seed
+    if not done.study.file.model.stacking or done.comparison is None:
+        return occurrence_prior(done.fit, transfer, seed=seed)
+    priors = {str(fit.fraction_prior) for fit in done.fits}
+    if len(priors) > 1 or transfer.at:
+        raise InputError(
+            Fault(
+                "stacked fractions can be carried on only where the models share one prior of the fraction",
+                where=f"{done.study.path}, key 'model.stacking'",
+                found="; ".join(sorted(priors)) + ("; 'transfer.at' given" if transfer.at else ""),
+                allowed="models without groups and with the same prior, at their reference covariates",
+                remedy="set stacking = false, or give the models the same prior under [model.priors]",
+            )
+        )
+    weights = ", ".join(f"{name} {weight:.2f}" for name, weight in done.comparison.weights.items())
+    return occurrence_prior(
+        done.comparison.fraction,
+        transfer,
+        fraction_prior=done.fit.fraction_prior,
+        seed=seed,
+        reference=f"{done.fit.fraction}, models averaged by stacking ({weights})",
+    )
 
 
 def _write_fit(result: RunResult) -> list[Path]:
@@ -258,6 +292,8 @@ def _write_fit(result: RunResult) -> list[Path]:
         tree.attrs["marks"] = "; ".join(fit.marks)
         tree.to_netcdf(temporary, engine="h5netcdf")
     files.append(folder / "posterior.nc")
+    if result.comparison is not None:
+        files.append(_write_table(_marked(result.comparison.table, fit.marks), folder / "comparison.csv"))
     if len(result.sample.rejected):
         files.append(_write_table(result.sample.rejected, folder / "rejected_rows.csv"))
     files.append(_write_record(result))

@@ -19,6 +19,7 @@ from .occurrence import TransferSettings, parse_transfer
 from .population import PopulationModel, load_model
 from .population.covariates import column_of
 from .population.distributions import Number
+from .population.masses import PROGENITOR_MASS
 from .population.quantities import Thresholds
 from .sensitivity import ChannelSettings, midpoint_shift
 
@@ -32,6 +33,7 @@ class ModelSettings(Settings):
     groups: str | None = None
     atmospheres: list[Literal["H", "He"]] = Field(default_factory=lambda: ["H"], min_length=1)
     priors: dict[str, Any] = Field(default_factory=dict)
+    stacking: bool = False
 
     @model_validator(mode="after")
     def _named(self) -> ModelSettings:
@@ -39,6 +41,8 @@ class ModelSettings(Settings):
             raise ValueError("the name of a model, or a list of names, none empty")
         if len(set(self.names)) < len(self.names):
             raise ValueError("each model once")
+        if self.stacking and len(self.names) < 2:
+            raise ValueError("stacking only with several models")
         return self
 
     @property
@@ -133,7 +137,9 @@ class Study:
             )
             for name, settings in self.channels.items()
         }
-        covariates = {column_of(item.name) for model in self.models for item in model.covariates}
+        # a progenitor mass may also come from the remnant's mass: the model itself checks that
+        needed = {item.name for model in self.models for item in model.covariates} - {PROGENITOR_MASS}
+        covariates = {column_of(name) for name in needed}
         groups = self.file.model.groups or ("survey" if any(model.file.groups for model in self.models) else None)
         return RowRules(
             pollution=rules.get("pollution"),
@@ -195,7 +201,7 @@ def load_study(path: str | Path) -> Study:
             )
         )
     loaded = [load_model(name, path.parent) for name in file.model.names]
-    models = tuple(_with_overrides(model, file.model.priors, where) for model in loaded)
+    models = _with_overrides(loaded, file.model.priors, where)
     transfer = None if file.transfer is None else parse_transfer(file.transfer, where, path.parent)
     mission = None if file.mission is None else parse_mission(file.mission, where, path.parent)
     if mission is not None and transfer is None:
@@ -210,5 +216,16 @@ def load_study(path: str | Path) -> Study:
     return Study(path, file, models, transfer, mission)
 
 
-def _with_overrides(model: PopulationModel, priors: Mapping[str, Any], where: str) -> PopulationModel:
-    return model.with_priors(priors, where) if priors else model
+def _with_overrides(
+    models: list[PopulationModel], priors: Mapping[str, Any], where: str
+) -> tuple[PopulationModel, ...]:
+    """Models with the study's priors; each override goes to every model that has the parameter."""
+    known = {name for model in models for name in model.priors}
+    # the first model tells of a parameter that none has
+    strange = {name: value for name, value in priors.items() if name not in known}
+    if strange:
+        models[0].with_priors(strange, where)
+    return tuple(
+        model.with_priors({name: value for name, value in priors.items() if name in model.priors}, where)
+        for model in models
+    )

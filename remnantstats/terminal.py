@@ -73,6 +73,10 @@ def show_result(result: RunResult) -> None:
     columns = ["quantity", "q50", "q16", "q84", "q05", "q95"]
     shown = fit.table[columns].rename(columns={"q50": "median"})
     console.print(_table(shown, f"{result.study.file.title} — model '{fit.model.name}', {len(result.sample)} stars"))
+    if result.comparison is not None:
+        columns = ["model", "elpd", "elpd_difference", "difference_se", "weight", "worst_k", "q16", "q50", "q84"]
+        title = f"Models compared by leave-one-out; {fit.fraction} under each and stacked (models averaged by weight)"
+        console.print(_table(result.comparison.table[columns], title))
     checks = pd.DataFrame([{"check": c.name, "verdict": _SIGNS[c.verdict], "finding": c.message} for c in fit.checks])
     console.print(_table(checks, "Checks"))
     if result.prior is not None:

@@ -38,11 +38,14 @@ def build_model(problem: Problem) -> Any:
 def _variable(parameter: Parameter) -> dict[str, Any]:
     name = parameter.name
     if not parameter.free:
-        value = parameter.prior.value
+        value = parameter.fixed_value
         fixed: dict[str, Any] = {name: pt.constant(value, dtype="float64")}
         if parameter.support == "unit" and value < 1:
             fixed[logit_of(name)] = pt.constant(np.log(value) - np.log1p(-value), dtype="float64")
         return fixed
+    if parameter.inverse:
+        inverse = _random_variable(f"inverse_{name}", parameter.prior, None)
+        return {name: pm.Deterministic(name, 1 / inverse)}
     variable = _random_variable(name, parameter.prior, "group" if name == GROUP_RAW else None)
     if parameter.support == "unit":
         return {name: variable, logit_of(name): pt.log(variable) - pt.log1p(-variable)}

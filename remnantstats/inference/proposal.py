@@ -19,7 +19,7 @@ import numpy.typing as npt
 import scipy.interpolate
 import scipy.special
 
-__all__ = ["LogDensity", "Mixture", "Proposal", "RidgeProposal", "SplitStudent"]
+__all__ = ["LogDensity", "Mixture", "Proposal", "RidgeProposal", "SplitStudent", "fitted_mixture"]
 
 FloatArray = npt.NDArray[np.float64]
 LogDensity = Callable[[FloatArray], FloatArray]
@@ -34,6 +34,10 @@ _NODES = 12
 _GROWTH = 1.2
 #: the marginal is flattened a little, so that weights fall outwards
 _TEMPER = 0.9
+#: components of a fitted mixture at most, draws behind each parameter of a component at least, steps of the fit
+_COMPONENTS = 8
+_BEHIND = 8
+_EM_STEPS = 12
 #: step of numeric derivatives and longest Newton step, in conditional standard deviations
 _DELTA = 0.1
 _LONGEST = 3.0
@@ -141,6 +145,46 @@ class Mixture:
         return np.asarray(scipy.special.logsumexp(terms, axis=0))
 
 
+def fitted_mixture(u: FloatArray, covariance: FloatArray) -> Mixture:
+    """A mixture of Student-t components fitted to draws by expectation and maximisation (Cappé et al. 2008).
+
+    For posteriors that are no ridge along one coordinate: a funnel of mean and spread, as one or two detections give.
+
+    Parameters
+    ----------
+    u : ndarray, shape (S, d)
+        Equally weighted draws.
+    covariance : ndarray, shape (d, d)
+        Of the draws; sets the least spread of a component.
+
+    Returns
+    -------
+    Mixture
+    """
+    size, dimension = u.shape
+    count = int(np.clip(size // (_BEHIND * (dimension + 2) ** 2), 1, _COMPONENTS))
+    # started from slices along the longest axis in units of each coordinate's spread
+    scaled = (u - u.mean(axis=0)) / np.sqrt(np.diag(covariance))
+    order = np.argsort(scaled @ np.linalg.eigh(np.cov(scaled.T).reshape(dimension, dimension))[1][:, -1])
+    belonging = np.zeros((count, size))
+    for row, part in zip(belonging, np.array_split(order, count), strict=True):
+        row[part] = 1.0
+    for _ in range(_EM_STEPS):
+        shares = np.maximum(belonging.sum(axis=1) / size, 1e-6)
+        parts = [_component(u, row / (size * share), covariance) for row, share in zip(belonging, shares, strict=True)]
+        shares = shares / shares.sum()
+        terms = np.array([np.log(share) + part.log_density(u) for part, share in zip(parts, shares, strict=True)])
+        belonging = np.exp(terms - scipy.special.logsumexp(terms, axis=0))
+    return Mixture(parts, [float(share) for share in shares])
+
+
+def _component(u: FloatArray, weight: FloatArray, covariance: FloatArray) -> SplitStudent:
+    centre = weight @ u
+    deviation = u - centre
+    spread = (deviation * weight[:, None]).T @ deviation + 1e-3 * covariance
+    return SplitStudent(centre, _cholesky(spread), np.full((2, u.shape[1]), _WIDEN))
+
+
 @dataclass(frozen=True)
 class _LogLinear:
     """A density in one dimension whose log is linear between knots and beyond them."""
@@ -218,14 +262,18 @@ class RidgeProposal:
     ----------
     log_density : callable
         Takes points of shape (S, d), gives shape (S,).
-    mode : ndarray, shape (d,)
-    covariance : ndarray, shape (d, d)
-        Inverse of the negative curvature at the mode.
+    nodes : sequence of _Node
+        At least two, in rising order; `traced` finds them.
     """
 
-    def __init__(self, log_density: LogDensity, mode: FloatArray, covariance: FloatArray) -> None:
+    @classmethod
+    def traced(cls, log_density: LogDensity, mode: FloatArray, covariance: FloatArray) -> RidgeProposal | None:
+        """Follow the ridge through a mode; None where the density is finite at the mode's own value alone."""
         nodes = _trace(log_density, mode, covariance)
-        self.size = len(mode) - 1
+        return cls(log_density, nodes) if len(nodes) > 1 else None
+
+    def __init__(self, log_density: LogDensity, nodes: Sequence[_Node]) -> None:
+        self.size = len(nodes[0].mode)
         self.nodes = np.array([node.at for node in nodes])
         self.marginal = _LogLinear.through(self.nodes, np.array([node.marginal for node in nodes]))
         table = [self._row(log_density, node) for node in nodes]
@@ -252,7 +300,7 @@ class RidgeProposal:
         factor[:, lower[0], lower[1]] = row[:, k : k + len(lower[0])]
         diagonal = np.arange(k)
         factor[:, diagonal, diagonal] = np.exp(factor[:, diagonal, diagonal])
-        scales = np.exp(row[:, k + len(lower[0]) :]).reshape(-1, 2, k)
+        scales = np.exp(row[:, k + len(lower[0]) :]).reshape(len(row), 2, k)
         return centre, factor, np.moveaxis(scales, 1, 0)
 
     def draw(self, rng: np.random.Generator, size: int) -> FloatArray:
@@ -323,7 +371,7 @@ def _derivatives(value: LogDensity, size: int) -> tuple[float, FloatArray, Float
     """Value, gradient and negative Hessian at 0, all points evaluated in one call."""
     unit = np.eye(size)
     pairs = [(i, j) for i in range(size) for j in range(i)]
-    both = np.array([unit[i] + unit[j] for i, j in pairs]).reshape(-1, size)
+    both = np.array([unit[i] + unit[j] for i, j in pairs]).reshape(len(pairs), size)
     values = value(_DELTA * np.vstack([np.zeros((1, size)), unit, -unit, both, -both]))
     top, rest = float(values[0]), values[1:]
     up, down = rest[:size], rest[size : 2 * size]

@@ -5,7 +5,7 @@ No compiler is loaded. It serves a handful of parameters; its Pareto k̂ says wh
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -17,7 +17,7 @@ from ..errors import InferenceError
 from ..population import Problem
 from ..population.parameters import DEBRIS_FRACTION
 from .pareto import smooth_weights
-from .proposal import LogDensity, Mixture, Proposal, RidgeProposal, SplitStudent
+from .proposal import LogDensity, Mixture, Proposal, RidgeProposal, SplitStudent, fitted_mixture
 
 __all__ = ["QuickDraws", "importance_draws", "mode_and_covariance", "starting_points"]
 
@@ -27,6 +27,9 @@ FloatArray = npt.NDArray[np.float64]
 K_LIMIT = 0.7
 #: below this a further round is not worth its time
 _K_GOOD = 0.4
+_EFFECTIVE_GOOD = 0.5
+#: draws from which a further proposal is learnt
+_LEARN = 2000
 #: parameters up to which the ridge is traced: its cost grows with the square of their number
 _CURVED_LIMIT = 12
 #: share of the draws along the ridge; the rest guards against a ridge that was traced badly
@@ -49,7 +52,7 @@ class QuickDraws:
         Effective number of draws, 1 / Σ w².
     mode : ndarray, shape (dimension,)
     covariance : ndarray, shape (dimension, dimension)
-        Of the weighted draws: the spread of the whole posterior.
+        Of the weighted draws: the spread of the whole posterior. From the curvature at the mode where not `usable`.
     evidence : float
         Log of the mean raw weight: the log marginal likelihood, up to the likelihood's own constant.
     """
@@ -80,8 +83,8 @@ def importance_draws(problem: Problem, rng: np.random.Generator, draws: int = 60
 
     The first proposal comes from mode and curvature, a Student-t with its own scale on either side of each axis. Where
     the debris fraction is free and parameters are few, most draws come from a proposal that follows the curved ridge of
-    the posterior along the fraction. Where the weights have a heavy tail, the Student-t's axes are taken from the
-    weighted draws and used again, up to `rounds` times.
+    the posterior along the fraction. Where the weights have a heavy tail or few draws count, a mixture is fitted to the
+    weighted draws and drawn from, up to `rounds` times.
 
     Parameters
     ----------
@@ -116,20 +119,28 @@ def _improved(
     curved: bool,
 ) -> QuickDraws:
     """Draw in rounds, and keep the draws with the lightest tail of weights."""
-    plain = SplitStudent.about(log_density, mode, covariance)
-    ridge = RidgeProposal(log_density, mode, covariance) if curved else None
-    share, best = _RIDGE_SHARE, None
-    for _ in range(rounds):
-        proposal = plain if ridge is None else Mixture((ridge, plain), (share, 1 - share))
-        current = _weighted(log_density, rng, proposal, mode, draws)
-        if best is None or current.k_hat < best.k_hat:
-            best = current
-        if current.k_hat < _K_GOOD:
+    parts: list[Proposal] = [SplitStudent.about(log_density, mode, covariance)]
+    shares = [1.0]
+    ridge = RidgeProposal.traced(log_density, mode, covariance) if curved else None
+    if ridge is not None:
+        parts, shares = [ridge, *parts], [_RIDGE_SHARE, 1 - _RIDGE_SHARE]
+    best = current = _weighted(log_density, rng, Mixture(parts, shares), mode, draws)
+    for _ in range(rounds - 1):
+        if current.k_hat < _K_GOOD and current.effective > _EFFECTIVE_GOOD * draws:
             break
-        plain, share = SplitStudent.about(log_density, mode, current.covariance), 0.5
-    if best is None:
-        raise InferenceError("the quick engine drew nothing")
-    return best
+        learnt = fitted_mixture(best.resampled(rng, _LEARN), best.covariance)
+        # the first proposals stay, so that what the fit has not seen is still reached
+        wide = SplitStudent.about(log_density, mode, best.covariance)
+        again = Mixture([learnt, wide, *parts], [0.5, 0.2, *(0.3 * share for share in shares)])
+        current = _weighted(log_density, rng, again, mode, draws)
+        best = max(best, current, key=_quality)
+    # weights that cannot be trusted do not tell the spread either: a few of them may carry everything
+    return best if best.usable else replace(best, covariance=covariance)
+
+
+def _quality(found: QuickDraws) -> tuple[float, float]:
+    """Lighter tails first; among light tails, more effective draws."""
+    return -max(found.k_hat, _K_GOOD), found.effective
 
 
 def mode_and_covariance(log_density: LogDensity, starts: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -9,6 +9,7 @@ import numpy.typing as npt
 
 from ..catalog import Sample
 from ..errors import Fault, ModelError
+from .masses import PROGENITOR_MASS, progenitor_posterior
 from .rows import LatentCovariate
 from .spec import CovariateSpec
 
@@ -16,6 +17,7 @@ __all__ = ["centred_covariates", "column_of", "covariate_values", "group_index"]
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
+BoolArray = npt.NDArray[np.bool_]
 
 LN10 = float(np.log(10))
 
@@ -102,19 +104,17 @@ def centred_covariates(
     centred, reference = {}, {}
     latent: LatentCovariate | None = None
     for spec in specs:
+        if spec.name == PROGENITOR_MASS:
+            mass = progenitor_posterior(sample, spec.mass_slope, spec.relation_scatter)
+            if mass is not None:
+                centred[spec.name], reference[spec.name], latent = _latent_mass(mass, blind, latent)
+                continue
         value, error = covariate_values(sample, spec.name)
         reference[spec.name] = float(value[blind].mean() if blind.any() else value.mean())
         centred[spec.name] = value - reference[spec.name]
         if not np.any(error > 0):
             continue
-        if latent is not None:
-            raise ModelError(
-                Fault(
-                    "two covariates carry errors; the model can integrate over one",
-                    where=f"columns '{column_of(latent.name)}_err' and '{column_of(spec.name)}_err'",
-                    remedy="drop the errors of the better known one, and say so where you report the result",
-                )
-            )
+        _refuse_second(latent, spec.name)
         gaps = np.flatnonzero(~(error > 0))
         if gaps.size:
             raise ModelError(
@@ -127,6 +127,31 @@ def centred_covariates(
             )
         latent = LatentCovariate(spec.name, centred[spec.name], error)
     return centred, reference, latent
+
+
+def _latent_mass(
+    mass: tuple[FloatArray, FloatArray], blind: BoolArray, latent: LatentCovariate | None
+) -> tuple[FloatArray, float, LatentCovariate]:
+    """Progenitor masses as centred means, their reference, and the latent covariate."""
+    _refuse_second(latent, PROGENITOR_MASS)
+    nodes, log_weights = mass
+    weight = np.exp(log_weights)
+    mean = (nodes * weight).sum(axis=1)
+    sd = np.sqrt(((nodes - mean[:, None]) ** 2 * weight).sum(axis=1))
+    reference = float(mean[blind].mean() if blind.any() else mean.mean())
+    centred = mean - reference
+    return centred, reference, LatentCovariate(PROGENITOR_MASS, centred, sd, nodes - reference, log_weights)
+
+
+def _refuse_second(latent: LatentCovariate | None, name: str) -> None:
+    if latent is not None:
+        raise ModelError(
+            Fault(
+                "two covariates carry errors; the model can integrate over one",
+                where=f"columns '{column_of(latent.name)}_err' and '{column_of(name)}_err'",
+                remedy="drop the errors of the better known one, and say so where you report the result",
+            )
+        )
 
 
 def group_index(sample: Sample, column: str) -> tuple[IntArray, tuple[str, ...]]:

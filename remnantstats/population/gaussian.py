@@ -18,7 +18,7 @@ from .bivariate import log_phi2
 from .ops import Array, ArrayOps, log_normal_density
 from .trivariate import log_phi3
 
-__all__ = ["Decision", "HostState", "Value", "log_gaussian_integral"]
+__all__ = ["Decision", "HostState", "Value", "gaussian_breadth", "log_gaussian_integral"]
 
 
 class Value(NamedTuple):
@@ -58,6 +58,11 @@ class HostState:
     sd: Mapping[str, Array]
     correlation: Array | None = None
     shape: Mapping[str, Array] = field(default_factory=dict)
+
+
+def gaussian_breadth(decisions: int) -> int:
+    """How many numbers one row takes while an integral with so many decisions is worked out."""
+    return (1, 1, 40, 2560)[decisions]
 
 
 def log_gaussian_integral(

@@ -49,9 +49,9 @@ class ArrayOps(Protocol):
 class NumpyOps:
     """The operations on NumPy arrays.
 
-    `logsumexp` and `least` act on the last axis and remove it; `trailing` appends an axis of length one; `take` picks along the
-    last axis; `log1mexp(x)` is log(1 − exp(x)) for x ≤ 0; `with_gradient` returns its value, since NumPy carries no
-    gradient.
+    `logsumexp` and `least` act on the last axis and remove it; `trailing` appends an axis of length one; `take` picks
+    along the last axis; `log1mexp(x)` is log(1 − exp(x)) for x ≤ 0; `with_gradient` returns its value, since NumPy
+    carries no gradient.
     """
 
     exp = staticmethod(np.exp)

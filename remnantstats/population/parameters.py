@@ -15,6 +15,7 @@ import scipy.special
 from ..errors import Fault, ModelError
 
 __all__ = [
+    "BY_INVERSE",
     "DEBRIS_FRACTION",
     "DUST_SHARE",
     "GROUP_RAW",
@@ -42,7 +43,12 @@ GROUP_RAW = "group_deviation"
 #: the same, spread over rows
 ROW_DEVIATION = "group_deviation by row"
 
+#: parameters whose prior is given for their inverse
+BY_INVERSE = frozenset({"tail_weight"})
+
 Support = Literal["unit", "positive", "real", "correlation"]
+#: from 500 degrees of freedom, all but normal, to one
+_INVERSE_BOUNDS = (0.002, 1.0)
 _BOUNDS: dict[str, tuple[float, float]] = {
     "unit": (0.0, 1.0),
     "positive": (0.0, np.inf),
@@ -100,12 +106,15 @@ class Parameter:
         Values that make sense.
     size : int
         1 for a scalar; the number of groups for the groups' deviations.
+    inverse : bool
+        The prior, and the unconstrained scale, are those of the parameter's inverse.
     """
 
     name: str
     prior: Any
     support: Support
     size: int = 1
+    inverse: bool = False
 
     @property
     def free(self) -> bool:
@@ -113,10 +122,26 @@ class Parameter:
         return not self.prior.is_fixed
 
     @property
+    def fixed_value(self) -> float:
+        """Value of a parameter that is held fixed."""
+        value = float(self.prior.value)
+        return 1 / value if self.inverse else value
+
+    def sample_prior(self, rng: np.random.Generator, size: int) -> FloatArray:
+        """Draw from the prior, on the parameter's own scale."""
+        drawn = np.asarray(self.prior.sample(rng, size), dtype=float)
+        return 1 / drawn if self.inverse else drawn
+
+    @property
     def bounds(self) -> tuple[float, float]:
         """Open interval on which the parameter moves: support of the prior within that of the parameter."""
         low, high = self.prior.support
-        return max(low, _BOUNDS[self.support][0]), min(high, _BOUNDS[self.support][1])
+        return max(low, self._range[0]), min(high, self._range[1])
+
+    @property
+    def _range(self) -> tuple[float, float]:
+        """Values that make sense, on the scale of the prior."""
+        return _INVERSE_BOUNDS if self.inverse else _BOUNDS[self.support]
 
     @property
     def limits(self) -> tuple[float, float]:
@@ -125,7 +150,7 @@ class Parameter:
 
     def draw(self, rng: np.random.Generator) -> float:
         """Draw one value from the prior."""
-        return float(self.prior.sample(rng, 1)[0])
+        return float(self.sample_prior(rng, 1)[0])
 
     def check(self, where: str) -> None:
         """Refuse a prior that does not fit.
@@ -146,7 +171,7 @@ class Parameter:
                 )
             )
         low, high = self.prior.support
-        least, most = _BOUNDS[self.support]
+        least, most = self._range
         if low < least or high > most or (self.prior.is_fixed and self._degenerate(low)):
             raise ModelError(
                 Fault(
@@ -178,20 +203,25 @@ class Parameter:
         dict
             The parameter, and its log-odds where it is a probability.
         """
+        value = self._on_prior_scale(u)
+        if self.inverse:
+            return {self.name: 1 / value}
+        if self.support != "unit":
+            return {self.name: value}
+        logit = u if self.bounds == (0.0, 1.0) else scipy.special.logit(value)
+        return {self.name: value, logit_of(self.name): logit}
+
+    def _on_prior_scale(self, u: FloatArray) -> FloatArray:
+        """The value that the prior is about."""
         low, high = self.bounds
         if np.isfinite(low) and np.isfinite(high):
-            value = low + (high - low) * scipy.special.expit(u)
-            if self.support != "unit":
-                return {self.name: value}
-            logit = u if (low, high) == (0.0, 1.0) else scipy.special.logit(value)
-            return {self.name: value, logit_of(self.name): logit}
-        if np.isfinite(low):
-            return {self.name: low + np.exp(u)}
-        return {self.name: u}
+            return np.asarray(low + (high - low) * scipy.special.expit(u))
+        return low + np.exp(u) if np.isfinite(low) else u
 
     def unconstrain(self, value: npt.ArrayLike) -> FloatArray:
         """Inverse of `constrain`, kept finite at the ends of the support."""
         x = np.asarray(value, dtype=float)
+        x = 1 / x if self.inverse else x
         low, high = self.bounds
         if np.isfinite(low) and np.isfinite(high):
             share = np.clip((x - low) / (high - low), 1e-12, 1 - 1e-12)
@@ -208,7 +238,7 @@ class Parameter:
             return np.asarray(
                 a * scipy.special.log_expit(u) + b * scipy.special.log_expit(-u) - scipy.special.betaln(a, b)
             )
-        value = self.constrain(u)[self.name]
+        value = self._on_prior_scale(u)
         if np.isfinite(low) and np.isfinite(high):
             jacobian = np.log(high - low) + scipy.special.log_expit(u) + scipy.special.log_expit(-u)
         elif np.isfinite(low):

@@ -53,6 +53,7 @@ def pose(
     """
     used = tuple(name for name in CHANNELS if name in channels)
     _check_channels(model, used)
+    _check_family(model, used)
     _check_atmospheres(sample, atmospheres)
     covariates, reference, latent = centred_covariates(sample, model.covariates)
     index, labels = np.zeros(len(sample), dtype=np.int64), ()
@@ -87,6 +88,44 @@ def _check_channels(model: PopulationModel, used: tuple[str, ...]) -> None:
         )
 
 
+def _check_family(model: PopulationModel, used: tuple[str, ...]) -> None:
+    """A family without a mean: nothing can act on it, and its constants are rates."""
+    family = FAMILIES[model.file.family]
+    missing = [name for name in family.constants if name not in model.file.constants]
+    if missing:
+        raise ModelError(
+            Fault(
+                f"the model '{model.name}' lacks a constant of its family '{model.file.family}'",
+                where=f"{model.source}, table [constants]",
+                allowed=", ".join(family.constants),
+                remedy=f"give '{missing[0]}'",
+            )
+        )
+    if family.location_scale:
+        return
+    acting = [covariate.name for covariate in model.covariates if "rate" in covariate.acts_on]
+    if acting:
+        raise ModelError(
+            Fault(
+                f"the family '{model.file.family}' has no mean rate on which a covariate could act",
+                where=f"{model.source}, covariate '{acting[0]}'",
+                found='acts_on with "rate"',
+                allowed='acts_on = ["fraction"]',
+                remedy="let the covariate act on the fraction alone, or use the family 'normal'",
+            )
+        )
+    if used != ("pollution",):
+        raise ModelError(
+            Fault(
+                f"the family '{model.file.family}' describes accretion rates",
+                where="study file",
+                found=", ".join(used),
+                allowed="pollution",
+                remedy="use the model 'steady' or 'heavy-tail' for the infrared channel",
+            )
+        )
+
+
 def _check_atmospheres(sample: Sample, admitted: Sequence[str]) -> None:
     atmosphere = sample.table["atmosphere"].to_numpy(dtype=str)
     for other in sorted(set(atmosphere) - set(admitted)):
@@ -105,10 +144,10 @@ def _parameters(
     model: PopulationModel, channels: tuple[str, ...], helium: bool, latent: LatentCovariate | None, groups: int
 ) -> tuple[Parameter, ...]:
     wanted: list[tuple[str, Support]] = [(names.DEBRIS_FRACTION, "unit")]
-    for channel in channels:
+    family = FAMILIES[model.file.family]
+    for channel in channels if family.location_scale else ():
         value = CHANNELS[channel].value
         wanted += [(f"mean_{value}", "real"), (f"sd_{value}", "positive")]
-    family = FAMILIES[model.file.family]
     wanted += [(name, "positive" if name == "tail_weight" else "real") for name in family.shape_parameters]
     if len(channels) == 2:
         wanted += [(names.CORRELATION, "correlation"), (names.DUST_SHARE, "unit")]
@@ -118,7 +157,9 @@ def _parameters(
         if "rate" in covariate.acts_on:
             wanted.append((names.rate_slope(covariate.name), "real"))
     if helium:
-        wanted += [(names.fraction_offset(), "real"), (names.rate_offset(), "real")]
+        wanted.append((names.fraction_offset(), "real"))
+    if helium and family.location_scale:
+        wanted.append((names.rate_offset(), "real"))
     if groups:
         wanted.append((names.GROUP_SD, "positive"))
     found = [_parameter(model, name, support) for name, support in wanted]
@@ -140,7 +181,7 @@ def _parameter(model: PopulationModel, name: str, support: Support) -> Parameter
                 remedy=f"add a prior for '{name}' to the model file",
             )
         )
-    parameter = Parameter(name, model.priors[name], support)
+    parameter = Parameter(name, model.priors[name], support, inverse=name in names.BY_INVERSE)
     parameter.check(model.source)
     return parameter
 

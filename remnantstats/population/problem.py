@@ -163,7 +163,8 @@ class Problem:
         if self.has(names.fraction_offset()):
             helium = _column(rows.helium.astype(float), nodes)
             odds = odds + theta[names.fraction_offset()] * helium
-            shift = shift + theta[names.rate_offset()] * helium
+            if self.has(names.rate_offset()):
+                shift = shift + theta[names.rate_offset()] * helium
         if self.groups:
             # simulation hands over one deviation a row
             by_row = names.ROW_DEVIATION in theta
@@ -182,6 +183,9 @@ class Problem:
         mean, sd = {}, {}
         for position, channel in enumerate(self.channels):
             value = CHANNELS[channel].value
+            if not self.family.location_scale:
+                mean[channel], sd[channel] = 0.0, 0.0
+                continue
             mean[channel] = theta[f"mean_{value}"] + (shift if position == 0 else 0.0)
             sd[channel] = theta[f"sd_{value}"]
         log_d = log_no_dust = None
@@ -212,9 +216,9 @@ class Problem:
         at = 0
         for parameter in self.parameters:
             if not parameter.free:
-                theta[parameter.name] = np.float64(parameter.prior.value)
-                if parameter.support == "unit" and parameter.prior.value < 1:
-                    value = parameter.prior.value
+                value = parameter.fixed_value
+                theta[parameter.name] = np.float64(value)
+                if parameter.support == "unit" and value < 1:
                     theta[names.logit_of(parameter.name)] = np.float64(np.log(value) - np.log1p(-value))
                 continue
             part = u[:, at : at + parameter.size]
@@ -282,7 +286,8 @@ class Problem:
     def chunk(self) -> int:
         """How many draws are evaluated at once, so that memory stays bounded."""
         latent = 1 if self.rows.latent is None else len(_T)
-        return int(np.clip(4_000_000 // max(len(self.rows) * latent, 1), 1, 4096))
+        widest = max((len(block.rows) * self.family.breadth(block.decisions) for block in self.blocks), default=1)
+        return int(np.clip(4_000_000 // max(widest * latent, 1), 1, 4096))
 
     def lift(self, theta: Mapping[str, FloatArray]) -> dict[str, Array]:
         """Give draws the trailing axes on which rows (and latent nodes) stand."""

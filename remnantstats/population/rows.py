@@ -186,6 +186,15 @@ class Block:
     selected_by: str
     same: bool
 
+    @property
+    def decisions(self) -> int:
+        """Most decisions that one of its terms carries."""
+        undecided = [
+            value in (LIMIT, DOUBTFUL) or (value == DETECTED and self.decided[name])
+            for name, value in self.outcome.items()
+        ]
+        return sum(undecided) + (self.selected_by != "")
+
 
 def _take(item: Any, index: IntArray) -> Any:
     """Index every array of a dataclass along its first axis."""

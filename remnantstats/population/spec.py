@@ -13,7 +13,7 @@ from pydantic import Field
 
 from ..errors import Fault, ModelError, nearest
 from ..fields import Settings, parse_settings, read_toml
-from .distributions import describe, parse_distribution
+from .distributions import Number, describe, parse_distribution
 from .families import FAMILIES
 
 __all__ = ["CovariateSpec", "PopulationModel", "load_model", "model_names"]
@@ -28,10 +28,16 @@ class CovariateSpec(Settings):
         A numeric column of the sample table, or `log_` and such a column for its log10.
     acts_on : list of {"fraction", "rate"}
         The log-odds of debris, the mean log rate, or both.
+    mass_slope : float
+        For `progenitor_mass` alone: slope of the initial mass function, the prior of every star's mass.
+    relation_scatter : float
+        For `progenitor_mass` alone: scatter of the initial–final mass relation, Msun.
     """
 
     name: str = Field(min_length=1, pattern=r"^[A-Za-z][A-Za-z0-9_]*$")
     acts_on: list[Literal["fraction", "rate"]] = Field(min_length=1)
+    mass_slope: Number = -2.3
+    relation_scatter: Number = Field(default=0.06, gt=0)
 
 
 class ModelFile(Settings):

@@ -23,8 +23,18 @@ class Family(Protocol):
     #: whether it is defined for two channels at once
     two_channels: bool
 
-    #: parameters of the family beyond a mean and a spread a channel
+    #: whether each channel has a mean and a spread
+    location_scale: bool
+
+    #: further parameters of the family
     shape_parameters: tuple[str, ...]
+
+    #: constants that its model files must give
+    constants: tuple[str, ...]
+
+    def breadth(self, decisions: int) -> int:
+        """How many numbers one row takes while an integral with so many decisions is worked out."""
+        ...
 
     def log_integral(
         self, ops: ArrayOps, state: HostState, values: Mapping[str, Value], decisions: Sequence[Decision]

@@ -7,7 +7,7 @@ from collections.abc import Mapping, Sequence
 import numpy as np
 import numpy.typing as npt
 
-from ..gaussian import Decision, HostState, Value, log_gaussian_integral
+from ..gaussian import Decision, HostState, Value, gaussian_breadth, log_gaussian_integral
 from ..ops import Array, ArrayOps
 from .base import register
 
@@ -18,7 +18,13 @@ class NormalFamily:
     """Closed forms throughout."""
 
     two_channels = True
+    location_scale = True
     shape_parameters: tuple[str, ...] = ()
+    constants: tuple[str, ...] = ()
+
+    def breadth(self, decisions: int) -> int:
+        """Numbers a row."""
+        return gaussian_breadth(decisions)
 
     def log_integral(
         self, ops: ArrayOps, state: HostState, values: Mapping[str, Value], decisions: Sequence[Decision]
