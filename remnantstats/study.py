@@ -127,7 +127,8 @@ def read_study_sample(study: Study) -> Sample:
 
 def posed(study: Study, sample: Sample, model: PopulationModel) -> Problem:
     """Pose one of the study's models on its sample."""
-    return pose(model, sample, study.channels, study.file.model.groups, study.file.model.atmospheres)
+    settings = study.file.model
+    return pose(model, sample, study.channels, settings.groups, settings.atmospheres, study.recoveries)
 
 
 def infer_study(

@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -21,7 +21,7 @@ from .population.covariates import column_of
 from .population.distributions import Number
 from .population.masses import PROGENITOR_MASS
 from .population.quantities import Thresholds
-from .sensitivity import ChannelSettings, midpoint_shift
+from .sensitivity import CHANNELS, ChannelSettings, RecoveryTable, midpoint_shift, read_recovery
 
 __all__ = ["Study", "load_study"]
 
@@ -98,6 +98,8 @@ class Study:
         In the order of the file, priors overridden.
     transfer : TransferSettings or None
     mission : MissionSettings or None
+    recoveries : mapping of str to RecoveryTable
+        Injection–recovery counts, by channel.
     """
 
     path: Path
@@ -105,6 +107,7 @@ class Study:
     models: tuple[PopulationModel, ...]
     transfer: TransferSettings | None
     mission: MissionSettings | None
+    recoveries: Mapping[str, RecoveryTable] = field(default_factory=dict)
 
     @property
     def folder(self) -> Path:
@@ -133,7 +136,11 @@ class Study:
         """What the study asks of each row of its sample."""
         rules = {
             name: ChannelRules(
-                settings.threshold_on, settings.false_positive > 0, settings.width, midpoint_shift(settings)
+                settings.threshold_on,
+                settings.false_positive > 0,
+                settings.width,
+                midpoint_shift(settings),
+                settings.efficiency_table is not None,
             )
             for name, settings in self.channels.items()
         }
@@ -165,6 +172,8 @@ class Study:
             "settings": self.file.model.model_dump(mode="json"),
             "sample": self.file.sample.model_dump(mode="json"),
             "seed": self.file.seed,
+            "recoveries": {name: [item.value.tolist(), item.injected.tolist(), item.recovered.tolist(), item.labels]
+                           for name, item in self.recoveries.items()},
             **parts,
         }
         return hashlib.sha256(json.dumps(content, sort_keys=True).encode()).hexdigest()
@@ -213,7 +222,16 @@ def load_study(path: str | Path) -> Study:
                 remedy="add [transfer], or size from an exported prior with `remnantstats size`",
             )
         )
-    return Study(path, file, models, transfer, mission)
+    study = Study(path, file, models, transfer, mission)
+    return replace(study, recoveries=_recoveries(study))
+
+
+def _recoveries(study: Study) -> dict[str, RecoveryTable]:
+    return {
+        name: read_recovery(study.folder / settings.efficiency_table, CHANNELS[name].value)
+        for name, settings in study.channels.items()
+        if settings.efficiency_table is not None
+    }
 
 
 def _with_overrides(

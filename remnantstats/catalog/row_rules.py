@@ -256,6 +256,8 @@ def _why_limit(names: ChannelColumns, rules: ChannelRules) -> str:
 def _needs_limit(rows: Rows, names: ChannelColumns, rules: ChannelRules) -> Flags:
     """Tell which rows must have a limit."""
     observed = _equals(rows, names.outcome, "detected") | _equals(rows, names.outcome, "limit")
+    if rules.counted:
+        return np.zeros(len(rows.table), dtype=bool)
     if rules.threshold_on == "true" or rules.spurious:
         return observed
     further: Flags = np.asarray(

@@ -22,12 +22,15 @@ class ChannelRules:
         Width of the limits, dex, positive; a star's own width column goes before it.
     midpoint_shift : float
         Distance, in widths, from the threshold itself up to the limit as quoted.
+    counted : bool
+        An injection–recovery table stands for the limits, which the rows then need not have.
     """
 
     threshold_on: Literal["measured", "true"] = "measured"
     spurious: bool = False
     width: float = 0.15
     midpoint_shift: float = 0.0
+    counted: bool = False
 
 
 @dataclass(frozen=True)

@@ -10,10 +10,11 @@ import numpy.typing as npt
 import pandas as pd
 
 from ..population import Problem
-
+from ..population.gaussian import Decision, Value
+from ..population.likelihood import Probe, log_host_terms
 from ..population.ops import NUMPY
 from ..population.problem import latent_nodes
-from ..population.rows import DETECTED, DOUBTFUL, LIMIT, UNOBSERVED, ChannelRows
+from ..population.rows import DETECTED, DOUBTFUL, LIMIT, UNOBSERVED, blocks
 from ..sensitivity import CHANNELS
 from .design import SurveyDesign
 
@@ -22,7 +23,8 @@ __all__ = ["completeness_table", "debris_probability", "star_table"]
 FloatArray = npt.NDArray[np.float64]
 #: posterior draws over which a star's expectations are averaged
 _DRAWS = 200
-_NODES = 121
+#: variance, dex², of a measurement that tells nothing
+_PROBE = 1e4
 
 
 def debris_probability(problem: Problem, theta: Mapping[str, FloatArray]) -> FloatArray:
@@ -110,75 +112,50 @@ def star_table(problem: Problem, design: SurveyDesign, theta: Mapping[str, Float
 def _without_latent(problem: Problem) -> Problem:
     """The problem with covariates at their estimates: enough for a star's expectations."""
     rows = replace(problem.rows, latent=None)
-    return replace(problem, rows=rows)
+    return replace(problem, rows=rows, blocks=tuple(blocks(rows)))
 
 
 def _sensitivity(
     problem: Problem, design: SurveyDesign, theta: Mapping[str, FloatArray], name: str
 ) -> FloatArray:
-    plain = _without_latent(problem)
-    lifted = plain.lift(theta)
-    host = plain.state(NUMPY, plain.rows, lifted).host
-    channel = design.rows.channels[name]
-    grid, density = _grid(problem, host, name)
-    z = (grid - channel.limit[None, :, None]) / channel.width[None, :, None]
-    seen = channel.ceiling * np.exp(NUMPY.log_ndtr(z))
-    share = (density * seen).sum(axis=-1) / density.sum(axis=-1)
-    return np.asarray(np.where(channel.outcome == UNOBSERVED, 0.0, share.mean(axis=0)))
-
-
-def _grid(problem: Problem, host: object, name: str) -> tuple[FloatArray, FloatArray]:
-    """Values of one channel that cover the population, and its density there; shapes (S or 1, n or 1, K)."""
-    state = host
-    mean, sd = np.asarray(state.mean[name]), np.asarray(state.sd[name])  # type: ignore[attr-defined]
-    centre, width = np.atleast_2d(mean), np.atleast_2d(sd)
-    steps = np.linspace(-7, 7, _NODES)
-    grid = centre[..., None] + width[..., None] * steps
-    return grid, np.broadcast_to(np.exp(-0.5 * steps**2), grid.shape)
-
-
-def _expected(problem: Problem, theta: Mapping[str, FloatArray], name: str) -> FloatArray:
-    """Expected true log value of each star, given that it hosts debris (with dust, for that channel) and its data."""
+    """Probability that a host of the fitted population would have been genuinely detected in each star."""
     plain = _without_latent(problem)
     host = plain.state(NUMPY, plain.rows, plain.lift(theta)).host
-    channel = plain.rows.channels[name]
-    mean = np.broadcast_to(np.atleast_2d(host.mean[name]), (_size(theta), len(plain.rows)))
-    sd = np.broadcast_to(np.atleast_2d(host.sd[name]), mean.shape)
-    result = mean.mean(axis=0).copy()
-    detected = np.flatnonzero(np.isin(channel.outcome, (DETECTED, DOUBTFUL)))
-    limited = np.flatnonzero(channel.outcome == LIMIT)
-    if detected.size:
-        result[detected] = _expected_detected(channel.take(detected), mean[:, detected], sd[:, detected])
-    if limited.size:
-        result[limited] = _expected_limited(channel.take(limited), mean[:, limited], sd[:, limited])
-    return result
+    channel = design.rows.channels[name]
+    alone = replace(host, mean={name: host.mean[name]}, sd={name: host.sd[name]}, correlation=None)
+    known = np.isfinite(channel.limit)
+    limit = np.where(known, channel.limit, 0.0)
+    crossed = Decision(name, 1, 1.0, -limit, channel.width**2)
+    chance = channel.ceiling * np.exp(problem.family.log_integral(NUMPY, alone, {}, [crossed]))
+    mean = np.broadcast_to(chance, (_size(theta), len(limit))).mean(axis=0)
+    return np.where(channel.outcome == UNOBSERVED, 0.0, np.where(known, mean, np.nan))
 
 
 def _size(theta: Mapping[str, FloatArray]) -> int:
     return max(np.shape(value)[0] for value in theta.values() if np.ndim(value))
 
 
-def _expected_detected(channel: ChannelRows, mean: FloatArray, sd: FloatArray) -> FloatArray:
-    noise = (channel.error**2 + channel.calibration**2)[None, :]
-    variance = sd**2 * noise / (sd**2 + noise)
-    centre = (mean * noise + channel.value * sd**2) / (sd**2 + noise)
-    slope, offset, spread = (part[None, :] for part in channel.decision)
-    decided = channel.decided[None, :]
-    total = np.sqrt(np.where(decided, spread + slope**2 * variance, 1.0))
-    z = np.where(decided, (slope * centre + offset) / total, 0.0)
-    # mean of a normal weighted by Φ: shift by the inverse Mills ratio
-    mills = np.exp(-0.5 * z**2 - 0.5 * np.log(2 * np.pi) - NUMPY.log_ndtr(z))
-    return np.asarray((centre + np.where(decided, slope * variance / total * mills, 0.0)).mean(axis=0))
+def _expected(problem: Problem, theta: Mapping[str, FloatArray], name: str) -> FloatArray:
+    """Expected true log value of each star, given that it hosts debris (with dust, for that channel) and its data.
 
-
-def _expected_limited(channel: ChannelRows, mean: FloatArray, sd: FloatArray) -> FloatArray:
-    total = np.sqrt(sd**2 + channel.width[None, :] ** 2)
-    z = (channel.limit[None, :] - mean) / total
-    missed = channel.ceiling * np.exp(NUMPY.log_ndtr(z))
-    density = np.exp(-0.5 * z**2 - 0.5 * np.log(2 * np.pi))
-    # the share missed by the ceiling keeps the population's mean
-    shift = -(sd**2) / total * channel.ceiling * density / (missed + 1 - channel.ceiling)
-    return np.asarray((mean + shift).mean(axis=0))
+    By Tweedie's identity: with a further measurement v of variance V, E[x | data, v] = v + V ∂ log p(data, v)/∂v. V is
+    so large that the measurement tells nothing. It holds for every family and every outcome.
+    """
+    plain = _without_latent(problem)
+    lifted = plain.lift(theta)
+    centre = 8.0 if name == "pollution" else -3.0
+    result = np.full(len(plain.rows), np.nan)
+    order = {int(row): position for position, row in enumerate(plain.rows.star)}
+    for block in plain.blocks:
+        state = plain.state(NUMPY, block.rows, lifted)
+        up, down = (
+            log_host_terms(NUMPY, plain.family, block, state, Probe(name, Value(centre + step, _PROBE)))
+            for step in (1.0, -1.0)
+        )
+        expected = centre + _PROBE * (up - down) / 2
+        where = [order[int(row)] for row in block.rows.star]
+        result[where] = np.broadcast_to(expected, (_size(theta), len(where))).mean(axis=0)
+    return result
 
 
 def completeness_table(problem: Problem, design: SurveyDesign) -> pd.DataFrame:
@@ -203,7 +180,8 @@ def completeness_table(problem: Problem, design: SurveyDesign) -> pd.DataFrame:
         low, high = (4.0, 12.0) if name == "pollution" else (-6.0, 0.0)
         grid = np.round(np.arange(low, high + 0.01, 0.1), 2)
         z = (grid[None, :] - channel.limit[use][:, None]) / channel.width[use][:, None]
-        efficiency = channel.ceiling * np.exp(NUMPY.log_ndtr(z))
+        ceiling = np.broadcast_to(channel.ceiling, channel.limit.shape)[use]
+        efficiency = ceiling[:, None] * np.exp(NUMPY.log_ndtr(z))
         if not use.any():
             efficiency = np.full((1, len(grid)), np.nan)
         parts.append(

@@ -131,7 +131,7 @@ def _constant(problem: Problem, star: npt.NDArray[np.str_]) -> xr.Dataset:
 
 def _curve(name: str, curve: DetectionCurve) -> dict[str, Any]:
     value = CHANNELS[name].value
-    attributes = {"units": problem_unit(name), "ceiling": curve.ceiling, "threshold_on": curve.threshold_on}
+    attributes = {"units": problem_unit(name), "ceiling": np.asarray(curve.ceiling), "threshold_on": curve.threshold_on}
     return {
         f"{value}_limit_50": ("star", curve.limit, attributes),
         f"{value}_width": ("star", curve.width, {"units": "dex"}),

@@ -3,20 +3,22 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from ..catalog import Sample
 from ..errors import Fault, ModelError
-from ..sensitivity import CHANNELS, ChannelSettings, detection_curve
+from ..sensitivity import CHANNELS, ChannelSettings, RecoveryTable, detection_curve, recovery_index
 from . import parameters as names
 from .covariates import centred_covariates, group_index
 from .distributions import HalfNormal, Normal
+from .efficiency import efficiency_parameters
 from .families import FAMILIES
 from .parameters import Parameter, Support
 from .problem import Problem
-from .rows import LatentCovariate, blocks, rows_of
+from .rows import LatentCovariate, Rows, blocks, rows_of
 from .spec import PopulationModel
 
 __all__ = ["pose"]
@@ -28,6 +30,7 @@ def pose(
     channels: Mapping[str, ChannelSettings],
     groups: str | None = None,
     atmospheres: Sequence[str] = ("H",),
+    recoveries: Mapping[str, RecoveryTable] | None = None,
 ) -> Problem:
     """Pose a population model on a sample.
 
@@ -41,6 +44,8 @@ def pose(
         Column that defines groups, for models that pool.
     atmospheres : sequence of str, optional
         Atmospheres admitted.
+    recoveries : mapping of str to RecoveryTable, optional
+        Injection–recovery counts, by channel.
 
     Returns
     -------
@@ -59,10 +64,28 @@ def pose(
     index, labels = np.zeros(len(sample), dtype=np.int64), ()
     if model.file.groups:
         index, labels = group_index(sample, groups or "survey")
-    curves = {name: detection_curve(sample, name, channels[name]) for name in used}
+    recoveries = recoveries or {}
+    curves = {name: detection_curve(sample, name, channels[name], recoveries.get(name)) for name in used}
     rows = rows_of(sample, curves, covariates, latent, index)
+    # a star's own counts enter as their normal approximation, in its curve; those of a class are inferred jointly
+    joint = {name: table for name, table in recoveries.items() if table.by != "star"}
+    rows = _with_classes(rows, sample, joint)
     parameters = _parameters(model, used, bool(rows.helium.any()), latent, len(labels))
-    return Problem(model, sample, used, curves, rows, tuple(blocks(rows)), parameters, reference, labels)
+    parameters += tuple(item for name, table in joint.items() for item in efficiency_parameters(name, table))
+    if not any(item.free for item in parameters):
+        raise ModelError(
+            Fault("every parameter is fixed; there is nothing to infer", where=model.source, remedy="free one prior")
+        )
+    return Problem(model, sample, used, curves, rows, tuple(blocks(rows)), parameters, reference, labels, joint)
+
+
+def _with_classes(rows: Rows, sample: Sample, tables: Mapping[str, RecoveryTable]) -> Rows:
+    """Rows that know their class in each recovery table."""
+    channels = {
+        name: replace(channel, recovery=recovery_index(sample, name, tables[name])) if name in tables else channel
+        for name, channel in rows.channels.items()
+    }
+    return replace(rows, channels=channels)
 
 
 def _check_channels(model: PopulationModel, used: tuple[str, ...]) -> None:

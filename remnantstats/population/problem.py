@@ -3,15 +3,16 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
 from ..catalog import Sample
-from ..sensitivity import CHANNELS, DetectionCurve
+from ..sensitivity import CHANNELS, DetectionCurve, RecoveryTable
 from . import parameters as names
+from .efficiency import efficiency_of, log_recovered
 from .families import FAMILIES, Family
 from .gaussian import HostState
 from .likelihood import SelectedTerms, StarState, log_likelihood_terms
@@ -50,6 +51,8 @@ class Problem:
         Covariate values at which `debris_fraction` and the mean rate hold.
     groups : tuple of str
         Names of the groups; empty where the model does not pool.
+    recoveries : mapping of str to RecoveryTable
+        Channels whose efficiency is inferred from injection and recovery.
     """
 
     model: PopulationModel
@@ -61,6 +64,7 @@ class Problem:
     parameters: tuple[Parameter, ...]
     reference: Mapping[str, float]
     groups: tuple[str, ...] = ()
+    recoveries: Mapping[str, RecoveryTable] = field(default_factory=dict)
 
     @property
     def family(self) -> Family:
@@ -110,6 +114,10 @@ class Problem:
             total = total + axis_sum(terms * block.rows.weight)
         if self.rows.latent is not None and self.rows.latent.nodes is None:
             total = total + axis_sum(self._covariate_density(ops, theta))
+        for channel, table in self.recoveries.items():
+            flat = {name: _flat(value) for name, value in theta.items()}
+            for part in log_recovered(ops, channel, table, flat):
+                total = total + axis_sum(part)
         return total
 
     def _block(self, ops: ArrayOps, block: Block, theta: Mapping[str, Array]) -> Array:
@@ -170,7 +178,14 @@ class Problem:
             by_row = names.ROW_DEVIATION in theta
             effect = theta[names.ROW_DEVIATION] if by_row else ops.take(theta[names.GROUP_RAW], rows.group)
             odds = odds + theta[names.GROUP_SD] * (effect if nodes is None else ops.trailing(effect))
-        return self.star_state(ops, theta, odds, shift)
+        state = self.star_state(ops, theta, odds, shift)
+        if not self.recoveries:
+            return state
+        efficiency = {
+            channel: efficiency_of(ops, channel, table, rows.channels[channel], theta, nodes is not None)
+            for channel, table in self.recoveries.items()
+        }
+        return replace(state, efficiency=efficiency)
 
     def star_state(self, ops: ArrayOps, theta: Mapping[str, Array], odds: Array, shift: Array) -> StarState:
         """The population at given shifts of the log-odds and of the mean log rate."""

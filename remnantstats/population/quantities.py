@@ -20,6 +20,8 @@ __all__ = ["Quantity", "Thresholds", "fraction_name", "median_limit", "reported"
 FloatArray = npt.NDArray[np.float64]
 
 NEW_GROUP = "new group"
+#: variance, dex², of a threshold that is sharp; not zero, for families that integrate numerically
+_SHARP = 1e-12
 
 
 @dataclass(frozen=True)
@@ -123,11 +125,17 @@ def _slopes(problem: Problem, theta: Mapping[str, FloatArray]) -> list[Quantity]
         Quantity(
             stem,
             np.stack([values for _, values in entries], axis=1),
-            "atmosphere" if stem.endswith("offset") else "covariate",
+            _dim_of(stem),
             tuple(label for label, _ in entries),
         )
         for stem, entries in found.items()
     ]
+
+
+def _dim_of(stem: str) -> str:
+    if stem.startswith("efficiency"):
+        return "efficiency_class"
+    return "atmosphere" if stem.endswith("offset") else "covariate"
 
 
 def _groups(problem: Problem, theta: Mapping[str, FloatArray]) -> list[Quantity]:
@@ -161,7 +169,7 @@ def log_share_above(problem: Problem, theta: Mapping[str, FloatArray], channel: 
     state = host_state(problem, theta)
     if len(state.mean) == 2:
         state = HostState({channel: state.mean[channel]}, {channel: state.sd[channel]}, None, state.shape)
-    decision = Decision(channel, 1, 1.0, -value, 0.0)
+    decision = Decision(channel, 1, 1.0, -value, _SHARP)
     return np.asarray(problem.family.log_integral(NUMPY, state, {}, [decision]))
 
 
@@ -199,7 +207,7 @@ def _extrapolated(problem: Problem, theta: Mapping[str, FloatArray]) -> FloatArr
     middle = median_limit(problem)
     if not np.isfinite(middle):
         return np.full(size, np.nan)
-    below = Decision(problem.channels[0], -1, 1.0, -middle, 0.0)
+    below = Decision(problem.channels[0], -1, 1.0, -middle, _SHARP)
     state = host_state(problem, theta)
     if len(state.mean) == 2:
         first = problem.channels[0]

@@ -40,7 +40,10 @@ class ChannelRows:
         The observation that put the star in the sample; NaN for blind stars.
     same : ndarray of bool
         The tabulated detection is itself the selecting observation.
-    ceiling, spurious_scale : float
+    ceiling : float, or ndarray of shape (n,)
+    recovery : ndarray of int, shape (n,)
+        Index of the row's class in an injection–recovery table whose efficiency is inferred; −1 where there is none.
+    spurious_scale : float
     threshold_on : str
     """
 
@@ -54,9 +57,10 @@ class ChannelRows:
     selection_limit: FloatArray
     selection_width: FloatArray
     same: BoolArray
-    ceiling: float
+    ceiling: float | FloatArray
     spurious_scale: float
     threshold_on: str
+    recovery: IntArray | None = None
 
     def take(self, index: IntArray) -> ChannelRows:
         """The rows at `index`."""

@@ -7,6 +7,7 @@ from .figures_checks import plot_predictive
 from .figures_fraction import plot_fraction, plot_fraction_above, plot_groups, plot_parameter, plot_parameters
 from .figures_mission import plot_chance, plot_distances, plot_occurrence, plot_yield
 from .figures_sample import plot_completeness, plot_correction, plot_sample
+from .page import write_report
 
 __all__ = [
     "AssumptionRow",
@@ -25,4 +26,5 @@ __all__ = [
     "plot_predictive",
     "plot_sample",
     "plot_yield",
+    "write_report",
 ]

@@ -14,7 +14,15 @@ from ..population import parameters as names
 from ..population.distributions import describe
 from ..population.quantities import Thresholds
 from ..sensitivity import CHANNELS
-from .facts import channel_fraction, depth_bins, efficiency_at, median_depth, sample_fraction, smallest_seen
+from .facts import (
+    channel_fraction,
+    depth_bins,
+    efficiency_at,
+    median_depth,
+    reference_noun,
+    sample_fraction,
+    smallest_seen,
+)
 from .figures_sample import across
 from .glossary import channel_noun, define, threshold_text
 from .numbers import chance, count, measure, number, row_measure
@@ -52,7 +60,8 @@ def sample(fit: Fit, channel: str) -> Words:
     noun = channel_noun(channel)
     depth = median_depth(fit, channel)
     caption = (
-        f"Every observed star, by {label}. Filled circles: detections, with their errors. Open triangles: nothing seen, "
+        f"Every observed star, by {label}. Filled circles: detections, with their errors. Open triangles: nothing "
+        "seen, "
         f"drawn at the {noun} where detection is half as likely as it ever gets."
     )
     if known:
@@ -68,8 +77,11 @@ def correction(fit: Fit, channel: str) -> Words:
     draws = channel_fraction(fit, channel)
     corrected = measure(*np.quantile(draws, [0.5, 0.1587, 0.8413]))
     caption = (
-        "Dots: share detected among blind stars of like depth, with 68 % Wilson intervals; the deepest stars stand at the "
-        "left. Diamonds: what the fitted model expects to be detected there, with 90 % of replicated surveys. Band: the "
+        f"Dots: share detected among {reference_noun(fit)}s of like depth, with 68 % Wilson intervals; the deepest "
+        "stars stand "
+        "at the "
+        "left. Diamonds: what the fitted model expects to be detected there, with 90 % of replicated surveys. Band: "
+        "the "
         f"corrected fraction, {corrected}. The distance from dots to band is what the limits hide."
     )
     if fit.problem.reference:
@@ -91,7 +103,9 @@ def completeness(fit: Fit, channel: str) -> Words:
     if np.isfinite(half):
         caption += f" The mean reaches one half at log {number(half, 1)}."
     at = (7.0, 8.0) if channel == "pollution" else (-3.0, -2.0)
-    shares = ", ".join(f"{number(efficiency_at(fit, channel, value))} at {threshold_text(channel, value)}" for value in at)
+    shares = ", ".join(
+        f"{number(efficiency_at(fit, channel, value))} at {threshold_text(channel, value)}" for value in at
+    )
     return Words("What could have been seen", caption, f"Rising curve of mean chance of detection: {shares}.")
 
 
@@ -116,14 +130,15 @@ def above(fit: Fit, channel: str, thresholds: Thresholds) -> Words:
     caption = f"Share of all white dwarfs whose {noun} exceeds T."
     if np.isfinite(depth):
         caption += (
-            f" Hatched: below log {number(depth)}, the depth that half the blind stars reached; there the curve rests on "
+            f" Hatched: below log {number(depth)}, the depth that half the blind stars reached; there the curve "
+            "rests on "
             "the assumed shape."
         )
     stem = "debris_fraction_above" if channel == "pollution" else "dusty_fraction_above"
-    rows = [(value, f"{stem}[{value:g}]") for value in thresholds.of(channel)]
     known = set(fit.table["quantity"])
+    rows = [(value, f"{stem}[{value:g}]") for value in thresholds.of(channel) if f"{stem}[{value:g}]" in known]
     said = "; ".join(
-        f"above {threshold_text(channel, value)}: {row_measure(row_of(fit, name))}" for value, name in rows if name in known
+        f"above {threshold_text(channel, value)}: {row_measure(row_of(fit, name))}" for value, name in rows
     )
     return Words(f"Fraction above a given {noun}", caption, f"Falling curve of the fraction above T. {said}.")
 
@@ -152,7 +167,8 @@ def parameters(fit: Fit) -> Words:
         draws = fit.draws(quantity)
         said.append(f"{define(fit, quantity).label} {measure(*np.quantile(draws, [0.5, 0.1587, 0.8413]))}")
     caption = (
-        "Every free parameter: posterior (solid, filled) and prior (dashed). Where the two have the same shape, the data "
+        "Every free parameter: posterior (solid, filled) and prior (dashed). Where the two have the same shape, the "
+        "data "
         "say nothing and the prior stands."
     )
     return Words("Every parameter beside its prior", caption, "Densities. " + "; ".join(said) + ".")
@@ -174,7 +190,8 @@ def occurrence(prior: OccurrencePrior, before: Any = None) -> Words:
 def chance_of_one(plan: MissionSize) -> Words:
     """Words for the chance of at least one."""
     caption = (
-        "Chance of finding at least one planet sought. Solid: averaged over the occurrence prior. Dashed: as if the mean "
+        "Chance of finding at least one planet sought. Solid: averaged over the occurrence prior. Dashed: as if the "
+        "mean "
         "rate were certain, which promises too much."
     )
     return Words("How many targets", caption, "Rising curve. " + "; ".join(needs(plan)) + ".")
@@ -195,12 +212,18 @@ def needs(plan: MissionSize) -> list[str]:
 
 def planets_found(plan: MissionSize) -> Words:
     """Words for the yield."""
+    said = found_text(plan)
+    return Words("How many planets", f"Planets found against targets observed: {said}.", f"Rising lines: {said}.")
+
+
+def found_text(plan: MissionSize) -> str:
+    """Say how many planets the last target gives."""
     last = plan.table.iloc[-1]
-    said = (
-        f"{count(int(last['n_targets']), 'target')} find {number(last['expected'], 1)} planets on average, "
+    targets = count(int(last["n_targets"]), "target")
+    return (
+        f"{targets} find {number(last['expected'], 1)} planets on average, "
         f"{int(last['q05'])} to {int(last['q95'])} in 90 % of cases"
     )
-    return Words("How many planets", f"Planets found against targets observed: {said}.", f"Rising lines: {said}.")
 
 
 def distances(plan: MissionSize) -> Words:
@@ -229,4 +252,5 @@ def predictive(fit: Fit) -> Words:
         f"{inside} of {count(len(counts), 'count')} lie inside; predictive p = {text}."
     )
     channels = ", ".join(CHANNELS[name].label for name in fit.problem.channels)
-    return Words("Would the model give such a survey?", caption, f"Observed and replicated counts, {channels}. {caption}")
+    alternative = f"Observed and replicated counts, {channels}. {caption}"
+    return Words("Would the model give such a survey?", caption, alternative)

@@ -139,7 +139,8 @@ def _selection(channel: str, settings: ChannelSettings) -> list[AssumptionRow]:
         f"{settings.false_positive:g}, where the table gives none of the star's own",
     }
     if settings.false_positive > 0:
-        texts["spurious_scale"] = f"spurious detections lie above the limit by a half-normal of {settings.spurious_scale:g} dex"
+        scale = f"{settings.spurious_scale:g} dex"
+        texts["spurious_scale"] = f"spurious detections lie above the limit by a half-normal of {scale}"
     given = settings.model_fields_set
     return [
         AssumptionRow("detection", f"{channel}.{key}", text, NO_BASIS if key in given else DEFAULT)
@@ -153,8 +154,10 @@ def _population(fit: Fit) -> list[AssumptionRow]:
     shape = words.get(file.family, file.family)
     rows = [
         AssumptionRow(
-            "population", f"model {fit.model.name}", f"{file.title}; values of the hosts: {shape}",
-            " ".join(file.description.split()) or "the study's choice of model",
+            "population",
+            f"model {fit.model.name}",
+            " ".join(f"{file.title}; values of the hosts: {shape}. {file.description}".split()),
+            "the study's choice; below the limits the data do not test the shape",
         )
     ]
     rows += [

@@ -19,12 +19,13 @@ from ..sensitivity import CHANNELS
 __all__ = [
     "RawFraction",
     "channel_fraction",
-    "depth_bins",
     "density",
+    "depth_bins",
     "fraction_above",
     "median_depth",
     "population",
     "raw_fraction",
+    "reference_noun",
     "smallest_seen",
 ]
 
@@ -72,10 +73,22 @@ def blind_observed(fit: Fit, channel: str) -> npt.NDArray[np.bool_]:
     return np.asarray((stars["inclusion"] == "blind") & (stars[channel] != "unobserved"))
 
 
-def sample_fraction(fit: Fit, channel: str, where: npt.NDArray[np.bool_] | None = None) -> RawFraction:
-    """Raw fraction over blind observed stars, or over those of them in `where`."""
+def reference_stars(fit: Fit, channel: str) -> npt.NDArray[np.bool_]:
+    """Blind observed stars to which the fraction refers: helium stars that have offsets of their own are left out."""
     use = blind_observed(fit, channel)
-    use = use if where is None else use & where
+    if fit.problem.has(names.fraction_offset()):
+        use = use & np.asarray(fit.stars["atmosphere"] != "He")
+    return use
+
+
+def reference_noun(fit: Fit) -> str:
+    """What those stars are called: "blind star", or "blind hydrogen star" where helium stars have offsets."""
+    return "blind hydrogen star" if fit.problem.has(names.fraction_offset()) else "blind star"
+
+
+def sample_fraction(fit: Fit, channel: str, where: npt.NDArray[np.bool_] | None = None) -> RawFraction:
+    """Raw fraction over the reference stars, or over the blind observed stars in `where`."""
+    use = reference_stars(fit, channel) if where is None else blind_observed(fit, channel) & where
     return raw_fraction(int((fit.stars[channel][use] == "detected").sum()), int(use.sum()))
 
 
@@ -136,12 +149,12 @@ def depth_bins(fit: Fit, channel: str) -> pd.DataFrame:
     Returns
     -------
     pandas.DataFrame
-        A row a bin of blind observed stars, deepest first: `low`, `middle`, `high` (limits, log10), `stars`, `found`,
+        A row a bin of reference stars, deepest first: `low`, `middle`, `high` (limits, log10), `stars`, `found`,
         `raw`, `raw_low`, `raw_high` (68 % Wilson), `expected`, `expected_low`, `expected_high` (posterior predictive
         mean, 5 and 95 %: the fraction that the fitted model expects to be listed as detected).
     """
     limit = fit.stars[f"{CHANNELS[channel].value}_limit_50"].to_numpy(dtype=float)
-    use = blind_observed(fit, channel) & np.isfinite(limit)
+    use = reference_stars(fit, channel) & np.isfinite(limit)
     if not use.any():
         return pd.DataFrame(columns=["low", "middle", "high", "stars", "found", "raw", "expected"])
     edges = np.unique(np.quantile(limit[use], np.linspace(0, 1, _BINS + 1)))

@@ -72,11 +72,7 @@ def plot_sample(fit: Fit, channel: str = "", ax: Axes | None = None) -> Axes:
         label=f"nothing seen: limit ({limited.sum()})", rasterized=many,
     )
     if not many:
-        table = fit.sample.table
-        error = np.hypot(table[names.error].to_numpy(dtype=float), table[names.calibration].fillna(0).to_numpy(dtype=float))
-        ax.errorbar(
-            x[found], value[found], yerr=error[found], fmt="none", ecolor=COLOURS["found"], elinewidth=0.6, alpha=0.7
-        )
+        _error_bars(ax, fit, channel, x, found)
     ax.scatter(
         x[found], value[found], s=15, marker="o", color=COLOURS["found"], label=f"detected ({found.sum()})",
         rasterized=many, linewidths=0,
@@ -85,6 +81,16 @@ def plot_sample(fit: Fit, channel: str = "", ax: Axes | None = None) -> Axes:
     ax.set(xlabel=label, ylabel=AXES[channel], xscale=scale)
     legend(ax, 3)
     return ax
+
+
+def _error_bars(ax: Axes, fit: Fit, channel: str, x: FloatArray, found: npt.NDArray[np.bool_]) -> None:
+    names, table = CHANNELS[channel], fit.sample.table
+    calibration = table[names.calibration].fillna(0).to_numpy(dtype=float)
+    error = np.hypot(table[names.error].to_numpy(dtype=float), calibration)
+    value = table[names.value].to_numpy(dtype=float)
+    ax.errorbar(
+        x[found], value[found], yerr=error[found], fmt="none", ecolor=COLOURS["found"], elinewidth=0.6, alpha=0.7
+    )
 
 
 def _mark_known(ax: Axes, fit: Fit, x: FloatArray, y: FloatArray, use: npt.NDArray[np.bool_]) -> None:

@@ -16,7 +16,7 @@ from .figures_checks import plot_predictive, predictive_kinds
 from .figures_fraction import plot_fraction, plot_fraction_above, plot_groups, plot_parameters, shown_parameters
 from .figures_mission import plot_chance, plot_distances, plot_occurrence, plot_yield
 from .figures_sample import plot_completeness, plot_correction, plot_sample
-from .style import HALF, WIDE, new_figure
+from .style import HALF, WIDE, new_figure, styled
 
 __all__ = ["Plate", "gallery"]
 
@@ -56,6 +56,7 @@ def gallery(contents: ReportContents) -> list[Plate]:
 
 
 def _single(plot: Callable[..., Any], *args: Any, wide: bool = False, height: float = 2.5) -> Callable[[], Figure]:
+    @styled
     def draw() -> Figure:
         figure = new_figure(WIDE if wide else HALF, height)
         plot(*args, ax=figure.add_subplot())
@@ -87,7 +88,8 @@ def _seen(contents: ReportContents) -> list[Plate]:
                 _single(plot_fraction_above, fit, channel),
             ),
         ]
-    return plates
+    # what follows from the sample comes after it, channel by channel
+    return sorted(plates, key=lambda plate: plate.section != SEEN)
 
 
 def _out_there(contents: ReportContents) -> list[Plate]:
@@ -129,6 +131,7 @@ def _checks(contents: ReportContents) -> list[Plate]:
         return []
     kinds = predictive_kinds(fit)
 
+    @styled
     def draw() -> Figure:
         rows = -(-len(kinds) // 2)
         figure = new_figure(WIDE if len(kinds) > 1 else HALF, 2.5 * rows)

@@ -139,9 +139,11 @@ def _labelled(fit: Fit, stem: str, label: str) -> Term:
     words = label.removeprefix("log_").replace("_", " ")
     per = "dex" if label.startswith("log_") else "unit"
     if stem == "fraction_slope":
-        return Term(f"Fraction slope, {words}", f"logit per {per}", f"Change of the log-odds of debris per {per} of {words}")
+        meaning = f"Change of the log-odds of debris per {per} of {words}"
+        return Term(f"Fraction slope, {words}", f"logit per {per}", meaning)
     if stem == "rate_slope":
-        return Term(f"Rate slope, {words}", f"dex per {per}", f"Change of the mean log {_NOUN[first]} per {per} of {words}")
+        meaning = f"Change of the mean log {_NOUN[first]} per {per} of {words}"
+        return Term(f"Rate slope, {words}", f"dex per {per}", meaning)
     if stem == "fraction_offset":
         return Term(f"Fraction offset, {label}", "logit", f"Log-odds of debris of {label} stars less those of H stars")
     if stem == "rate_offset":

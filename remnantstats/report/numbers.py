@@ -5,7 +5,18 @@ from __future__ import annotations
 import math
 from typing import Any
 
-__all__ = ["MINUS", "chance", "count", "decimals_for", "measure", "number", "plain", "plain_interval", "row_measure", "span"]
+__all__ = [
+    "MINUS",
+    "chance",
+    "count",
+    "decimals_for",
+    "measure",
+    "number",
+    "plain",
+    "plain_interval",
+    "row_measure",
+    "span",
+]
 
 MINUS = "−"
 #: most decimals that are ever written

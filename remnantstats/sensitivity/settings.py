@@ -30,6 +30,8 @@ class ChannelSettings(Settings):
         Probability, in [0, 1), that a star not genuinely detected is listed as detected.
     spurious_scale : float
         dex, > 0: half-normal scale by which a spurious detection lies above its limit.
+    efficiency_table : str or None
+        Injection–recovery counts instead of limit, width and ceiling; a path relative to the study file.
     """
 
     threshold_on: Literal["measured", "true"] = "measured"
@@ -38,6 +40,21 @@ class ChannelSettings(Settings):
     ceiling: Annotated[_Number, Field(gt=0, le=1)] = 1.0
     false_positive: Annotated[_Number, Field(ge=0, lt=1)] = 0.0
     spurious_scale: Annotated[_Number, Field(gt=0, le=5)] = 0.3
+    efficiency_table: Annotated[str, Field(min_length=1)] | None = None
+
+    @model_validator(mode="after")
+    def _table_of_true_value(self) -> ChannelSettings:
+        if self.efficiency_table is None:
+            return self
+        if self.threshold_on == "measured":
+            raise ValueError(
+                'threshold_on = "true" together with efficiency_table: injected signals give an efficiency of the true '
+                "value"
+            )
+        given = {"limit_efficiency", "width", "ceiling"} & self.model_fields_set
+        if given:
+            raise ValueError(f"no {', '.join(sorted(given))} beside efficiency_table, which gives the curve itself")
+        return self
 
     @model_validator(mode="after")
     def _below_ceiling(self) -> ChannelSettings:

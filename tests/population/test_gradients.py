@@ -17,7 +17,7 @@ Density = Callable[[np.ndarray], tuple[float, np.ndarray]]
 
 
 def compiled(problem: Problem) -> Density:
-    """Log posterior and gradient from the PyMC model, without an LLVM compiler."""
+    """Log posterior and gradient from the PyMC model, neither rewritten nor compiled: the graph as it was built."""
     import pytensor
     import pytensor.tensor as pt
     from pytensor.graph.replace import clone_replace
@@ -33,7 +33,8 @@ def compiled(problem: Problem) -> Density:
         at += size
     assert at == problem.dimension
     (density,) = clone_replace([model.logp()], replace=parts)
-    function = pytensor.function([u], [density, pt.grad(density, u)], mode="FAST_COMPILE")
+    mode = pytensor.compile.mode.Mode(linker="py", optimizer="merge")
+    function = pytensor.function([u], [density, pt.grad(density, u)], mode=mode)
     return lambda x: (lambda pair: (float(pair[0]), np.asarray(pair[1])))(function(x))
 
 
@@ -51,15 +52,19 @@ def check(problem: Problem, density: Density, u: np.ndarray) -> None:
     np.testing.assert_allclose(slope, difference, rtol=1e-5, atol=1e-5 + 1e-10 * abs(plain))
 
 
-def problem_of(kit: Any, name: str, kind: str = "measured", n: int = 150) -> Problem:
-    """A small survey with every outcome: doubtful and sure detections, selected stars, both atmospheres, ceilings."""
+def problem_of(kit: Any, name: str, kind: str = "measured", n: int = 150, plain: bool = False) -> Problem:
+    """A small survey with every outcome: doubtful and sure detections, selected stars, both atmospheres, ceilings.
+
+    A plain one has neither ceilings, calibration errors nor selected stars: fewer formulas, a smaller graph.
+    """
     rng = np.random.default_rng(11)
     model = kit.load_model(name)
     channels = ["pollution", "excess"] if model.file.channels == "both" else ["pollution"]
     settings = {
-        channel: ChannelSettings(threshold_on=kind, ceiling=0.85, false_positive=0.05, width=0.2) for channel in channels
+        channel: ChannelSettings(threshold_on=kind, ceiling=1.0 if plain else 0.85, false_positive=0.05, width=0.2)
+        for channel in channels
     }
-    known = {channel: 16 for channel in channels}
+    known = {} if plain else dict.fromkeys(channels, 16)
     table = kit.design_table(rng, n, settings, known)
     table.loc[: n // 8, "atmosphere"] = "He"
     for covariate in model.covariates:
@@ -69,7 +74,7 @@ def problem_of(kit: Any, name: str, kind: str = "measured", n: int = 150) -> Pro
     truth = {"debris_fraction": 0.5, "mean_log_accretion": 7.8, "sd_log_accretion": 0.7, "dust_share": 0.6}
     problem = kit.pose_table(table, model, settings, atmospheres=("H", "He"))
     truth = {name: value for name, value in truth.items() if problem.has(name) and problem.parameter(name).free}
-    table = kit.fill_in(rng, table, model, settings, truth, 0.25, atmospheres=("H", "He"))
+    table = kit.fill_in(rng, table, model, settings, truth, 0.0 if plain else 0.25, atmospheres=("H", "He"))
     # half of the detections without calibration error, where their value allows it
     value, limit = table["log_accretion"], table["log_accretion_limit"]
     table.loc[(np.arange(n) % 2 == 0) & (value > limit), "log_accretion_calibration_err"] = 0.0
@@ -88,39 +93,57 @@ def points_of(problem: Problem, rng: np.random.Generator, count: int) -> np.ndar
     return np.concatenate(centre) + rng.normal(0, 0.3, (count, problem.dimension))
 
 
+TWO_CHANNELS = ["dust-always", "dust-sometimes"]
+ONE_CHANNEL = [name for name in model_names() if name not in TWO_CHANNELS]
+
+
 @pytest.mark.parametrize("kind", ["measured", "true"])
-@pytest.mark.parametrize("name", model_names())
+@pytest.mark.parametrize(
+    "name", [*ONE_CHANNEL, *[pytest.param(name, marks=pytest.mark.slow) for name in TWO_CHANNELS]]
+)
 def test_gradient(kit: Any, name: str, kind: str) -> None:
     problem = problem_of(kit, name, kind)
     outcomes = {value for block in problem.blocks for value in block.outcome.values()}
     assert outcomes >= {"limit", "detected", "doubtful"} or kind == "true"
     assert any(block.selected_by for block in problem.blocks)
+    check_at_random(problem)
+
+
+@pytest.mark.parametrize(("name", "kind"), [("dust-always", "measured"), ("dust-sometimes", "true")])
+def test_gradient_of_two_channels(kit: Any, name: str, kind: str) -> None:
+    problem = problem_of(kit, name, kind, plain=True)
+    assert {"limit", "doubtful"} <= {value for block in problem.blocks for value in block.outcome.values()}
+    check_at_random(problem)
+
+
+def check_at_random(problem: Problem) -> None:
     density = compiled(problem)
     for u in points_of(problem, np.random.default_rng(12), 3):
         check(problem, density, u)
 
 
-@pytest.mark.parametrize("away", [15.0, 30.0, -30.0])
 @pytest.mark.parametrize("name", ["steady", "dust-sometimes", "heavy-tail", "power-law"])
-def test_limits_far_from_the_population(kit: Any, name: str, away: float) -> None:
+def test_limits_far_from_the_population(kit: Any, name: str) -> None:
     """Values and gradients stay finite with every limit 15 and 30 standard deviations from the population."""
-    problem = problem_of(kit, name, n=60)
+    problem = problem_of(kit, name, n=60, plain=name == "dust-sometimes")
     density = compiled(problem)
+    for away in (15.0, -15.0, 30.0, -30.0):
+        u = far_from_limits(problem, away)
+        value, slope = density(u)
+        assert np.isfinite(value) and np.all(np.isfinite(slope))
+        assert value == pytest.approx(problem.log_posterior(u[None])[0], rel=1e-8)
+
+
+def far_from_limits(problem: Problem, away: float) -> np.ndarray:
+    """A population of spread 0.5 so many standard deviations from the middle of the limits."""
     u = points_of(problem, np.random.default_rng(13), 1)[0]
-    at = 0
-    for parameter in problem.free:
-        if parameter.name.startswith("mean_"):
-            spread = f"sd_{parameter.name.removeprefix('mean_')}"
-            centre = 7.5 if "accretion" in parameter.name else -2.8
-            u[at] = centre + away * 0.5
-            u[next(i for i, item in enumerate(problem.free) if item.name == spread)] = np.log(0.5)
-        if parameter.name == "tail_index":
-            u[at] = away / 2
-        at += parameter.size
-    value, slope = density(u)
-    assert np.isfinite(value) and np.all(np.isfinite(slope))
-    plain = problem.log_posterior(u[None])[0]
-    assert value == pytest.approx(plain, rel=1e-8)
+    at = {parameter.name: i for i, parameter in enumerate(problem.free)}
+    for channel, centre in (("log_accretion", 7.5), ("log_dust", -2.8)):
+        if f"mean_{channel}" in at:
+            u[at[f"mean_{channel}"]], u[at[f"sd_{channel}"]] = centre + 0.5 * away, np.log(0.5)
+    if "tail_index" in at:
+        u[at["tail_index"]] = away / 2
+    return u
 
 
 PRIORS = {
@@ -153,7 +176,8 @@ def test_priors_agree(kit: Any, name: str, prior: dict[str, Any]) -> None:
     density = compiled(problem)
     for u in rng.normal(0, 0.8, (3, problem.dimension)):
         value, _ = density(u)
-        assert value == pytest.approx(float(problem.log_posterior(u[None])[0]), rel=1e-10)
+        # PyMC keeps the normal's constant, 0.9189, in single precision: off by 1e-8 each
+        assert value == pytest.approx(float(problem.log_posterior(u[None])[0]), rel=1e-10, abs=2e-7)
 
 
 @pytest.mark.parametrize(

@@ -62,10 +62,11 @@ class PowerLawFamily:
         """Draw true values, by the inverse of the distribution function."""
         (channel,) = state.mean
         low, high = _ends(state)
-        slope, share = _LN10 * float(state.shape["tail_index"]), rng.random(size)
-        if abs(slope) * (high - low) < 1e-9:
-            return {channel: low + (high - low) * share}
-        return {channel: low - np.log1p(share * np.expm1(-slope * (high - low))) / slope}
+        slope, share = _LN10 * np.asarray(state.shape["tail_index"], dtype=float), rng.random(size)
+        flat = np.abs(slope) * (high - low) < 1e-9
+        steep = np.where(flat, 1.0, slope)
+        drawn = low - np.log1p(share * np.expm1(-steep * (high - low))) / steep
+        return {channel: np.where(flat, low + (high - low) * share, drawn)}
 
 
 def _ends(state: HostState) -> tuple[float, float]:
@@ -99,31 +100,39 @@ def by_closed_form(ops: ArrayOps, slope: Array, ends: tuple[float, float], value
 def by_quadrature(
     ops: ArrayOps, slope: Array, ends: tuple[float, float], value: Value | None, decisions: Sequence[Decision]
 ) -> Array:
-    """Log of the same integral with decisions, in log-sum-exp form over each row's own nodes.
-
-    What was measured and decided is data, so that nodes and factors are plain arrays in either backend.
-    """
-    edges = _edges(ends, value, decisions)
+    """Log of the same integral with decisions, in log-sum-exp form over each row's own nodes."""
+    # limits that are themselves inferred (from recovery tables) may be symbols: then the support is parted more finely
+    known = [item for item in decisions if all(map(_is_data, (item.slope, item.offset, item.variance)))]
+    edges = _edges(ends, value, known, 1 if len(known) == len(decisions) else 4)
     width = np.diff(edges, axis=-1)[..., None]
     x = (edges[..., :-1, None] + width * _NODES).reshape(*edges.shape[:-1], -1)
     with np.errstate(divide="ignore"):
-        factor = np.log(width * _WEIGHTS).reshape(x.shape)
-    factor = np.maximum(factor, -1e4)
+        factor = np.maximum(np.log(width * _WEIGHTS).reshape(x.shape), -1e4)
     if value is not None:
         at, variance = _last(value.value), _last(value.variance)
         factor = factor - 0.5 * (at - x) ** 2 / variance - 0.5 * np.log(2 * np.pi * variance)
-    for item in decisions:
+    for item in known:
         argument = item.sign * (_last(item.slope) * x + _last(item.offset)) / np.sqrt(_last(item.variance))
         factor = factor + NUMPY.log_ndtr(argument)
+    for item in decisions:
+        if not any(item is other for other in known):
+            offset = ops.trailing(item.slope) * x + ops.trailing(item.offset)
+            factor = factor + ops.log_ndtr(item.sign * offset / ops.sqrt(ops.trailing(item.variance)))
     return ops.logsumexp(factor - ops.trailing(slope) * x)
 
 
-def _edges(ends: tuple[float, float], value: Value | None, decisions: Sequence[Decision]) -> FloatArray:
+def _is_data(x: Array) -> bool:
+    return isinstance(x, (int, float, np.ndarray, np.generic))
+
+
+def _edges(
+    ends: tuple[float, float], value: Value | None, decisions: Sequence[Decision], finer: int
+) -> FloatArray:
     """Sorted ends of each row's panels, on a last axis."""
     low, high = ends
     first, last = np.asarray(low), np.asarray(high)
     if value is None:
-        parts = [np.linspace(low, high, _SUPPORT_PANELS + 1)]
+        parts = [np.linspace(low, high, finer * _SUPPORT_PANELS + 1)]
     else:
         at, sd = _last(value.value), np.sqrt(_last(value.variance))
         nearest = np.clip(at, low, high)
@@ -131,7 +140,7 @@ def _edges(ends: tuple[float, float], value: Value | None, decisions: Sequence[D
         # beyond an end of the support the density falls faster than its own width
         reach = sd * (np.sqrt(away**2 + _REACH**2) - away)
         first, last = np.maximum(nearest - reach, low), np.minimum(nearest + reach, high)
-        parts = [first + (last - first) * np.linspace(0, 1, _VALUE_PANELS + 1)]
+        parts = [first + (last - first) * np.linspace(0, 1, finer * _VALUE_PANELS + 1)]
     for item in decisions:
         turn, spread = -_last(item.offset) / _last(item.slope), np.sqrt(_last(item.variance)) / _last(item.slope)
         parts.append(np.clip(turn + spread * _PARTS, first, last))
