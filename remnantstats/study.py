@@ -20,7 +20,7 @@ import pandas as pd
 from .catalog import Sample, read_sample
 from .errors import Fault, InputError
 from .files import atomic_path, make_folder, write_text
-from .inference Fit, fit_problem
+from .inference import Fit, fit_problem
 from .inference.compare import Comparison, compare
 from .mission import MissionSize, size_mission, write_mission
 from .occurrence import OccurrencePrior, TransferSettings, occurrence_prior, write_prior

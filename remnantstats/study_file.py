@@ -31,7 +31,7 @@ class ModelSettings(Settings):
 
     name: str | list[str]
     groups: str | None = None
-    atmospheres: list[Literal["H", "He"]] = Field(default_factory=lambda: ["H"], min_length=1)
+    atmospheres: list[Literal["H", "He"]] = Field(default=["H"], min_length=1)
     priors: dict[str, Any] = Field(default_factory=dict)
     stacking: bool = False
 

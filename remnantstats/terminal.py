@@ -31,7 +31,9 @@ def _table(frame: pd.DataFrame, title: str) -> Table:
     table = Table(title=Text(title), box=box.SIMPLE, title_justify="left", pad_edge=False)
     for name in frame.columns:
         number = pd.api.types.is_numeric_dtype(frame[name])
-        table.add_column(Text(str(name)), justify="right" if number else "left", overflow="fold", no_wrap=number)
+        long = not number and frame[name].astype(str).str.len().max() > 40
+        heading = Text(str(name).replace("_", " ") if title == "Census" else str(name))
+        table.add_column(heading, justify="right" if number else "left", overflow="fold", no_wrap=not long)
     for row in frame.itertuples(index=False):
         table.add_row(*[Text(_cell(value)) for value in row])
     return table
@@ -94,11 +96,12 @@ def show_result(result: RunResult) -> None:
 
 def _headline(fit: Fit) -> str:
     row = fit.table.iloc[0]
-    listed = fit.sample.table[fit.problem.channels[0]]
+    table = fit.sample.table
+    listed = table.loc[table["inclusion"] == "blind", fit.problem.channels[0]]
     seen, observed = int((listed == "detected").sum()), int((listed != "unobserved").sum())
     word = "dust" if fit.fraction == "dusty_fraction" else "debris"
     return (
-        f"{seen} of {observed} observed stars are listed as detected; corrected for each star's own limit, the fraction "
+        f"{seen} of {observed} blind observed stars are listed as detected; corrected for each star's own limit, the fraction "
         f"with {word} is {row.q50:.3f} (68 %: {row.q16:.3f} to {row.q84:.3f})."
     )
 

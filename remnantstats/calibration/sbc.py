@@ -68,7 +68,8 @@ class CalibrationReport:
 
     def __repr__(self) -> str:
         head = f"calibration of '{self.model}': {self.surveys} surveys of {self.stars} stars, {self.refused} refused"
-        return head + "\n" + self.coverage().to_string(index=False, float_format=lambda x: f"{x:.3f}")
+        table: str = self.coverage().to_string(index=False, float_format=lambda x: f"{x:.3f}")
+        return f"{head}\n{table}"
 
 
 def calibrate(

@@ -69,7 +69,8 @@ def compare(fits: Sequence[Fit], seed: int) -> Comparison:
     Vehtari, Simpson & Gelman 2018, Bayesian Anal. 13, 917.
     """
     results = {fit.model.name: _leave_one_out(fit) for fit in fits}
-    pointwise, rows = [], []
+    pointwise: list[FloatArray] = []
+    rows: list[dict[str, Any]] = []
     for fit in fits:
         result = results[fit.model.name]
         elpd = np.asarray(result.elpd_i).reshape(-1)
@@ -122,7 +123,7 @@ def _stacking(results: Mapping[str, Any]) -> FloatArray:
         warnings.simplefilter("ignore")
         table = arviz_stats.compare(dict(results), method="stacking", **options)
     weight = np.array([float(table.loc[name, "weight"]) for name in results])
-    return weight / weight.sum()
+    return np.asarray(weight / weight.sum())
 
 
 def _mixture(draws: Sequence[FloatArray], weights: FloatArray, rng: np.random.Generator) -> FloatArray:

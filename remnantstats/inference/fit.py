@@ -142,4 +142,5 @@ class Fit:
 
     def _repr_html_(self) -> str:
         head = escape(repr(self).splitlines()[0])
-        return f"<p>{head}</p>" + self.table.to_html(index=False, float_format=lambda x: f"{x:.4g}")
+        table: str = self.table.to_html(index=False, float_format=lambda x: f"{x:.4g}")
+        return f"<p>{head}</p>{table}"

@@ -171,5 +171,6 @@ def _count(bins: list[dict[str, object]], outcomes: Mapping[str, ChannelOutcome]
             columns.append(((channel.outcome == DETECTED) & item["mask"]).sum(axis=1))
         else:
             with np.errstate(invalid="ignore"):
-                columns.append(((channel.value >= item["low"]) & (channel.value < item["high"])).sum(axis=1))
+                low, high = float(str(item["low"])), float(str(item["high"]))
+                columns.append(((channel.value >= low) & (channel.value < high)).sum(axis=1))
     return np.stack(columns, axis=1).astype(float) if columns else np.zeros((1, 0))

@@ -72,6 +72,11 @@ class PytensorOps:
         return pt.min(x, axis=-1)
 
     @staticmethod
+    def sum_last(x: Array) -> Array:
+        """Sum over the last axis."""
+        return pt.sum(x, axis=-1)
+
+    @staticmethod
     def trailing(x: Array) -> Array:
         """Append an axis of length one."""
         return pt.shape_padright(pt.as_tensor_variable(x))

@@ -132,7 +132,7 @@ def _sensitivity(
 
 
 def _size(theta: Mapping[str, FloatArray]) -> int:
-    return max(np.shape(value)[0] for value in theta.values() if np.ndim(value))
+    return max(int(np.shape(value)[0]) for value in theta.values() if np.ndim(value))
 
 
 def _expected(problem: Problem, theta: Mapping[str, FloatArray], name: str) -> FloatArray:

@@ -83,7 +83,8 @@ def _with_index(dataset: xr.Dataset) -> xr.Dataset:
 
 
 def _draws(quantities: Sequence[Quantity], shape: tuple[int, int]) -> xr.Dataset:
-    variables, coords = {}, {}
+    variables: dict[str, Any] = {}
+    coords: dict[str, tuple[Any, ...]] = {}
     for item in quantities:
         if not item.dim:
             variables[item.name] = (("chain", "draw"), item.values.reshape(shape))

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import numpy.typing as npt
+import pandas as pd
 import scipy.special
 
 from ..catalog import Sample
@@ -74,11 +75,10 @@ def progenitor_posterior(
     return gauss_nodes(grid, np.exp(log_density), _K)
 
 
-def _column(table: object, name: str) -> FloatArray:
-    frame = table
-    if name not in frame:  # type: ignore[operator]
-        return np.full(len(frame), np.nan)  # type: ignore[arg-type]
-    return np.asarray(frame[name], dtype=float)  # type: ignore[index]
+def _column(table: pd.DataFrame, name: str) -> FloatArray:
+    if name not in table:
+        return np.full(len(table), np.nan)
+    return np.asarray(table[name], dtype=np.float64)
 
 
 def _refuse(sample: Sample, bad: npt.NDArray[np.bool_], what: str, allowed: str) -> None:

@@ -40,6 +40,7 @@ class ArrayOps(Protocol):
     def log_expit(self, x: Array) -> Array: ...  # noqa: D102
     def gammaln(self, x: Array) -> Array: ...  # noqa: D102
     def logsumexp(self, x: Array) -> Array: ...  # noqa: D102
+    def sum_last(self, x: Array) -> Array: ...  # noqa: D102
     def least(self, x: Array) -> Array: ...  # noqa: D102
     def trailing(self, x: Array) -> Array: ...  # noqa: D102
     def take(self, x: Array, index: Array) -> Array: ...  # noqa: D102
@@ -89,6 +90,11 @@ class NumpyOps:
     def least(x: Array) -> Array:
         """Smallest element along the last axis."""
         return np.min(x, axis=-1)
+
+    @staticmethod
+    def sum_last(x: Array) -> Array:
+        """Sum over the last axis."""
+        return np.sum(x, axis=-1)
 
     @staticmethod
     def trailing(x: Array) -> Array:

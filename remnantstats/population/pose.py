@@ -61,7 +61,8 @@ def pose(
     _check_family(model, used)
     _check_atmospheres(sample, atmospheres)
     covariates, reference, latent = centred_covariates(sample, model.covariates)
-    index, labels = np.zeros(len(sample), dtype=np.int64), ()
+    index = np.zeros(len(sample), dtype=np.int64)
+    labels: tuple[str, ...] = ()
     if model.file.groups:
         index, labels = group_index(sample, groups or "survey")
     recoveries = recoveries or {}

@@ -212,4 +212,4 @@ def _extrapolated(problem: Problem, theta: Mapping[str, FloatArray]) -> FloatArr
     if len(state.mean) == 2:
         first = problem.channels[0]
         state = HostState({first: state.mean[first]}, {first: state.sd[first]}, None, state.shape)
-    return np.exp(np.broadcast_to(problem.family.log_integral(NUMPY, state, {}, [below]), (size,)))
+    return np.asarray(np.exp(np.broadcast_to(problem.family.log_integral(NUMPY, state, {}, [below]), (size,))))

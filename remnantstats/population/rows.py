@@ -64,7 +64,8 @@ class ChannelRows:
 
     def take(self, index: IntArray) -> ChannelRows:
         """The rows at `index`."""
-        return _take(self, index)
+        taken: ChannelRows = _take(self, index)
+        return taken
 
     @property
     def decision(self) -> tuple[FloatArray, FloatArray, FloatArray]:
@@ -117,7 +118,8 @@ class LatentCovariate:
 
     def take(self, index: IntArray) -> LatentCovariate:
         """The rows at `index`."""
-        return _take(self, index)
+        taken: LatentCovariate = _take(self, index)
+        return taken
 
 
 @dataclass(frozen=True)

@@ -170,7 +170,7 @@ def _with_true_covariate(rng: np.random.Generator, rows: Rows, theta: Mapping[st
     latent = rows.latent
     if latent is None:
         return rows
-    if latent.nodes is None:
+    if latent.nodes is None or latent.log_weights is None:
         upright = {key: value[:, None] if np.ndim(value) == 1 else value for key, value in theta.items()}
         nodes, _ = latent_nodes(NUMPY, latent, upright)
         centre, reach = nodes.mean(axis=1), (nodes[:, -1] - nodes[:, 0]) / 2

@@ -110,9 +110,7 @@ def _log_integral(ops: ArrayOps, b1: Array, b2: Array, b3: Array, r12: Array, r1
     return ops.logsumexp(value + _LOG_WEIGHTS) + ops.log(high - low)
 
 
-def _narrowed(
-    ops: ArrayOps, integrand: Callable[[Array], Array], low: Array, high: Array
-) -> tuple[Array, Array]:
+def _narrowed(ops: ArrayOps, integrand: Callable[[Array], Array], low: Array, high: Array) -> tuple[Array, Array]:
     """Ends of the stretch on which a log-concave integrand lies within reach of its highest value on a grid."""
     step = (high - low) / (len(_GRID) - 1)
     x = ops.trailing(low) + ops.trailing(high - low) * _GRID

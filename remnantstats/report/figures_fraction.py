@@ -36,7 +36,7 @@ def draw_posterior(ax: Axes, draws: FloatArray, label: str = "posterior") -> flo
     """Draw a posterior density, filled, with its median; give the density's top."""
     smooth = density(draws)
     if smooth is None:
-        ax.axvline(float(np.median(draws)), color=COLOURS["found"], label=f"{label} (fixed)")
+        ax.axvline(float(np.median(draws)), color=COLOURS["found"], label="fixed")
         return 1.0
     grid, height = smooth
     ax.fill_between(grid, height, color=COLOURS["wide"], linewidth=0)
@@ -88,7 +88,9 @@ def plot_fraction(fit: Fit, ax: Axes | None = None) -> Axes:
     draws = fit.draws(fit.fraction)
     top = draw_posterior(ax, draws)
     grid = np.linspace(0.001, 0.999, 400)
-    draw_prior(ax, fit.problem.parameter(names.DEBRIS_FRACTION).prior, grid)
+    prior = fit.problem.parameter(names.DEBRIS_FRACTION).prior
+    if not prior.is_fixed:
+        draw_prior(ax, prior, grid)
     raw = sample_fraction(fit, fit.problem.channels[0])
     if raw.observed:
         ax.axvline(raw.value, color=COLOURS["mark"], linestyle=":", linewidth=1.5, label="as counted")

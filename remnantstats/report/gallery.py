@@ -88,8 +88,9 @@ def _seen(contents: ReportContents) -> list[Plate]:
                 _single(plot_fraction_above, fit, channel),
             ),
         ]
-    # what follows from the sample comes after it, channel by channel
-    return sorted(plates, key=lambda plate: plate.section != SEEN)
+    # kind by kind: like figures of the two channels stand side by side
+    count = len(plates) // len(fit.problem.channels)
+    return [plate for kind in range(count) for plate in plates[kind::count]]
 
 
 def _out_there(contents: ReportContents) -> list[Plate]:

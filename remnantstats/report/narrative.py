@@ -131,7 +131,8 @@ def _counted(contents: ReportContents, channel: str) -> Step:
     stars = fit.stars
     known = int((stars["inclusion"] != "blind").sum())
     unobserved = int((stars[channel] == "unobserved").sum())
-    text = f"{raw.found} of {count(raw.observed, reference_noun(fit))} detected, of {count(len(stars), 'star')} in the sample"
+    text = f"{raw.found} of {count(raw.observed, reference_noun(fit))} detected"
+    text += f", of {count(len(stars), 'star')} in the sample"
     text += f"; {known} chosen for known debris are left out of the count" if known else ""
     text += f"; {unobserved} were not observed in this channel" if unobserved else ""
     result = raw_text(raw) if raw.observed else "–"

@@ -126,6 +126,7 @@ def _words(contents: ReportContents) -> dict[str, Any]:
         "heading": (f"[{', '.join(short)}] " if short else "") + contents.title,
         "marks": marks,
         "model": fit.model.name,
+        "many": len(fit.problem.channels) > 1,
         "stars": count(len(fit.stars), "star"),
         "prior": contents.prior is not None,
         "plan": contents.plan is not None,

@@ -7,6 +7,7 @@ from typing import Literal
 
 import numpy as np
 import numpy.typing as npt
+import pandas as pd
 import scipy.special
 
 from ..catalog import Sample
@@ -199,10 +200,8 @@ def midpoint_shift(settings: ChannelSettings) -> float:
     return float(scipy.special.ndtri(settings.limit_efficiency / settings.ceiling))
 
 
-def _column(table: object, name: str, default: float) -> FloatArray:
-    frame = table
-    size = len(frame)  # type: ignore[arg-type]
-    if name not in frame:  # type: ignore[operator]
-        return np.full(size, default)
-    values = np.asarray(frame[name], dtype=float)  # type: ignore[index]
+def _column(table: pd.DataFrame, name: str, default: float) -> FloatArray:
+    if name not in table:
+        return np.full(len(table), default)
+    values = table[name].to_numpy(dtype=np.float64)
     return np.where(np.isnan(values), default, values)

@@ -149,7 +149,7 @@ def _check_columns(frame: pd.DataFrame, path: Path, value: str) -> None:
 
 
 def _numbers(frame: pd.DataFrame, path: Path, name: str) -> FloatArray:
-    values = pd.to_numeric(frame[name], errors="coerce").to_numpy(dtype=float)
+    values: FloatArray = pd.to_numeric(frame[name], errors="coerce").to_numpy(dtype=np.float64)
     _refuse(path, ~np.isfinite(values), name, frame[name].to_numpy(), "a finite number")
     return values
 

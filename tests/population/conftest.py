@@ -1,4 +1,4 @@
-"""Rows, posed problems, simulated surveys and a mode-and-curvature fit, for the tests of the population's mathematics."""
+"""Rows, posed problems, simulated surveys and a mode-and-curvature fit, for tests of the population's mathematics."""
 
 from __future__ import annotations
 
@@ -61,7 +61,9 @@ def pose_table(
     return pose(model, sample, settings, **options)
 
 
-def design_table(rng: np.random.Generator, n: int, channels: Mapping[str, Any], known: Mapping[str, int]) -> pd.DataFrame:
+def design_table(
+    rng: np.random.Generator, n: int, channels: Mapping[str, Any], known: Mapping[str, int]
+) -> pd.DataFrame:
     """Stars of two depths; the first of them known for debris, where `known` says so."""
     inclusion = np.full(n, "blind", dtype=object)
     selection = np.full(n, np.nan)
@@ -125,7 +127,9 @@ def complete(problem: Problem, truth: Mapping[str, Any]) -> dict[str, Any]:
 
 def vector(problem: Problem, truth: Mapping[str, Any]) -> np.ndarray:
     """Unconstrained vector of a truth."""
-    parts = [np.broadcast_to(parameter.unconstrain(truth[parameter.name]), parameter.size) for parameter in problem.free]
+    parts = [
+        np.broadcast_to(parameter.unconstrain(truth[parameter.name]), parameter.size) for parameter in problem.free
+    ]
     return np.concatenate(parts)
 
 

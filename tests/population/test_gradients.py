@@ -88,7 +88,8 @@ def problem_of(kit: Any, name: str, kind: str = "measured", n: int = 150, plain:
 
 def points_of(problem: Problem, rng: np.random.Generator, count: int) -> np.ndarray:
     centre = [
-        np.full(parameter.size, parameter.unconstrain(np.median(parameter.sample_prior(rng, 400)))) for parameter in problem.free
+        np.full(parameter.size, parameter.unconstrain(np.median(parameter.sample_prior(rng, 400))))
+        for parameter in problem.free
     ]
     return np.concatenate(centre) + rng.normal(0, 0.3, (count, problem.dimension))
 
@@ -98,9 +99,7 @@ ONE_CHANNEL = [name for name in model_names() if name not in TWO_CHANNELS]
 
 
 @pytest.mark.parametrize("kind", ["measured", "true"])
-@pytest.mark.parametrize(
-    "name", [*ONE_CHANNEL, *[pytest.param(name, marks=pytest.mark.slow) for name in TWO_CHANNELS]]
-)
+@pytest.mark.parametrize("name", [*ONE_CHANNEL, *[pytest.param(name, marks=pytest.mark.slow) for name in TWO_CHANNELS]])
 def test_gradient(kit: Any, name: str, kind: str) -> None:
     problem = problem_of(kit, name, kind)
     outcomes = {value for block in problem.blocks for value in block.outcome.values()}
@@ -186,7 +185,9 @@ def test_priors_agree(kit: Any, name: str, prior: dict[str, Any]) -> None:
 def test_prior_on_the_inverse(kit: Any, prior: dict[str, Any]) -> None:
     rng = np.random.default_rng(15)
     problem = kit.pose_table(
-        kit.design_table(rng, 20, {"pollution": None}, {}), kit.load_model("heavy-tail"), {"pollution": ChannelSettings()}
+        kit.design_table(rng, 20, {"pollution": None}, {}),
+        kit.load_model("heavy-tail"),
+        {"pollution": ChannelSettings()},
     )
     weight = problem.parameter("tail_weight")
     assert weight.inverse and weight.constrain(np.zeros(1))["tail_weight"] == pytest.approx(1 / 0.26)

@@ -95,7 +95,9 @@ def double(x_: Channel, y_: Channel, outcome: tuple[str, str], theta: dict[str, 
     return float(host / below)
 
 
-def draw_rows(kit: Any, rng: np.random.Generator, outcome: str, settings: ChannelSettings, e: float, centre: float) -> Any:
+def draw_rows(
+    kit: Any, rng: np.random.Generator, outcome: str, settings: ChannelSettings, e: float, centre: float
+) -> Any:
     """Random rows about a population's centre, doubtful only above their limit."""
     limit = centre + rng.normal(0, 0.8, N)
     value = limit + np.abs(rng.normal(0, 0.7, N)) if e == 0 or outcome == "doubtful" else limit + rng.normal(0, 0.5, N)
@@ -178,7 +180,9 @@ def two_channels(kit: Any, seed: list[int], pair: tuple[str, str], e: float) -> 
         settings.append(item)
         channels[name] = draw_rows(kit, rng, outcome, item, e if outcome not in ("limit", "unobserved") else 0.0, mean)
     host = HostState(
-        {"pollution": theta["mx"], "excess": theta["my"]}, {"pollution": theta["sx"], "excess": theta["sy"]}, theta["rho"]
+        {"pollution": theta["mx"], "excess": theta["my"]},
+        {"pollution": theta["sx"], "excess": theta["sy"]},
+        theta["rho"],
     )
     f, d = theta["f"], theta["d"]
     state = StarState(np.log(f), np.log1p(-f), host, np.log(d), np.log1p(-d))
@@ -192,7 +196,9 @@ def test_two_channels(kit: Any, pair: tuple[str, str], e: float) -> None:
         seed = [PAIRS.index(pair), int(10 * e), repeat]
         _, settings, channels, theta, state = two_channels(kit, seed, pair, e)
         found = evaluate(kit.plain_rows(channels), state)
-        both = [[Channel(item, channels[name], i) for i in range(N)] for item, name in zip(settings, channels, strict=True)]
+        both = [
+            [Channel(item, channels[name], i) for i in range(N)] for item, name in zip(settings, channels, strict=True)
+        ]
         expected = [double(x, y, pair, theta) for x, y in zip(*both, strict=True)]
         np.testing.assert_allclose(found, expected, rtol=1e-8)
 
@@ -213,7 +219,9 @@ def test_selected_stars(kit: Any, pair: tuple[str, str], by: str) -> None:
         chosen.selection_width[:] = rng.uniform(0.1, 0.3, N)
         chosen.false_positive[:] = 0.0
         found = evaluate(kit.plain_rows(channels, blind=False), state)
-        both = [[Channel(item, channels[name], i) for i in range(N)] for item, name in zip(settings, channels, strict=True)]
+        both = [
+            [Channel(item, channels[name], i) for i in range(N)] for item, name in zip(settings, channels, strict=True)
+        ]
         expected = [double(x, y, pair, theta, "xy"[position]) for x, y in zip(*both, strict=True)]
         np.testing.assert_allclose(found, expected, rtol=1e-7)
 
@@ -293,7 +301,9 @@ def test_covariate_with_errors(kit: Any) -> None:
         f = scipy.special.expit(0.8 * z)
         outcome = str(table["pollution"][i])
         if problem.rows.blind[i]:
-            expected = sum(p * single(item, outcome, a, 7.6 - 0.5 * b, 0.7) for p, a, b in zip(weight, f, z, strict=True))
+            expected = sum(
+                p * single(item, outcome, a, 7.6 - 0.5 * b, 0.7) for p, a, b in zip(weight, f, z, strict=True)
+            )
         else:
             x = grid(7.6, 1.2, 0.02)
             p = norm.pdf(x, 7.6 - 0.5 * z[:, None], 0.7) * 0.02

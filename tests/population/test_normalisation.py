@@ -43,9 +43,7 @@ def values_of(
     return (edges[:-1, None] + width * (nodes + 1) / 2).ravel(), (width * weights / 2).ravel()
 
 
-def outcomes_of(
-    kit: Any, settings: ChannelSettings, e: float, limit: float, **coarser: Any
-) -> tuple[Any, np.ndarray]:
+def outcomes_of(kit: Any, settings: ChannelSettings, e: float, limit: float, **coarser: Any) -> tuple[Any, np.ndarray]:
     """One channel's rows for every node of a detection and for a limit, with their weights."""
     value, weight = values_of(settings, e, limit, **coarser)
     n, q = len(value) + 1, settings.false_positive
@@ -106,7 +104,9 @@ def test_two_channels_of_selected_stars(kit: Any, selected_by: str) -> None:
         selected_by: ChannelSettings(threshold_on="true", ceiling=0.8, width=0.2),
         other: ChannelSettings(ceiling=0.9, false_positive=0.1, width=0.2),
     }
-    channels = {name: outcomes_of(kit, settings[name], 0.0, 0.2, reach=5.0, order=4) for name in ("pollution", "excess")}
+    channels = {
+        name: outcomes_of(kit, settings[name], 0.0, 0.2, reach=5.0, order=4) for name in ("pollution", "excess")
+    }
     channels[selected_by][0].selection_limit[:] = 0.4
     state = state_of(rng, 2)
     names = list(channels)

@@ -42,9 +42,7 @@ class Family(Protocol):
         """Log of ∫ p(x) Π N(value; x) Π Φ(decision) dx."""
         ...
 
-    def simulate(
-        self, rng: np.random.Generator, state: HostState, size: int
-    ) -> Mapping[str, npt.NDArray[np.float64]]:
+    def simulate(self, rng: np.random.Generator, state: HostState, size: int) -> Mapping[str, npt.NDArray[np.float64]]:
         """Draw true values, one per star, for each channel of the state."""
         ...
 

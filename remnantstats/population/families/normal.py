@@ -32,9 +32,7 @@ class NormalFamily:
         """Log of ∫ p(x, y) Π N(value) Π Φ(decision)."""
         return log_gaussian_integral(ops, state, values, decisions)
 
-    def simulate(
-        self, rng: np.random.Generator, state: HostState, size: int
-    ) -> Mapping[str, npt.NDArray[np.float64]]:
+    def simulate(self, rng: np.random.Generator, state: HostState, size: int) -> Mapping[str, npt.NDArray[np.float64]]:
         """Draw true values."""
         channels = list(state.mean)
         first = rng.standard_normal(size)

@@ -56,9 +56,7 @@ class PowerLawFamily:
             log_integral = by_quadrature(ops, slope, ends, value, decisions)
         return log_integral - log_mass(ops, slope, ends)
 
-    def simulate(
-        self, rng: np.random.Generator, state: HostState, size: int
-    ) -> Mapping[str, npt.NDArray[np.float64]]:
+    def simulate(self, rng: np.random.Generator, state: HostState, size: int) -> Mapping[str, npt.NDArray[np.float64]]:
         """Draw true values, by the inverse of the distribution function."""
         (channel,) = state.mean
         low, high = _ends(state)
@@ -125,9 +123,7 @@ def _is_data(x: Array) -> bool:
     return isinstance(x, (int, float, np.ndarray, np.generic))
 
 
-def _edges(
-    ends: tuple[float, float], value: Value | None, decisions: Sequence[Decision], finer: int
-) -> FloatArray:
+def _edges(ends: tuple[float, float], value: Value | None, decisions: Sequence[Decision], finer: int) -> FloatArray:
     """Sorted ends of each row's panels, on a last axis."""
     low, high = ends
     first, last = np.asarray(low), np.asarray(high)

@@ -48,9 +48,7 @@ class StudentTFamily:
         ]
         return ops.logsumexp(log_gaussian_integral(ops, at_nodes, given, taken) + log_weight)
 
-    def simulate(
-        self, rng: np.random.Generator, state: HostState, size: int
-    ) -> Mapping[str, npt.NDArray[np.float64]]:
+    def simulate(self, rng: np.random.Generator, state: HostState, size: int) -> Mapping[str, npt.NDArray[np.float64]]:
         """Draw true values."""
         ((channel, mean),) = state.mean.items()
         return {channel: mean + state.sd[channel] * rng.standard_t(state.shape["tail_weight"], size)}
