@@ -324,6 +324,7 @@ def _write_report(result: RunResult) -> Path:
         channels=study.channels,
         provenance=_provenance(result),
         marks=result.marks,
+        transfer=study.transfer,
     )
     return write_report(contents, result.folder)
 

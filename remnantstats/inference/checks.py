@@ -183,12 +183,16 @@ def quick_check(k_hat: float, effective: float) -> list[Check]:
 
 def predictive_verdict(p_value: float, replicates: int) -> Check:
     """Check of the posterior predictive p value."""
+    allowed = f"posterior predictive p at least {LIMITS.predictive}"
+    if not replicates:
+        nothing = "not checked: no blind stars, whose detections could be predicted"
+        return Check("data like the model's own", "pass", float("nan"), allowed, nothing)
     text = f"{p_value:.3f}" if p_value > 0 else f"below {1 / replicates:.1g}"
     return Check(
         "data like the model's own",
         _judge(p_value >= LIMITS.predictive, "fail"),
         p_value,
-        f"posterior predictive p at least {LIMITS.predictive}",
+        allowed,
         f"counts by depth and by value lie as far from expectation, or farther, in a share of {text} of "
         f"{replicates} replicated surveys",
     )

@@ -11,7 +11,7 @@ import pandas as pd
 
 from ..population import Problem
 from ..population.parameters import GROUP_RAW, ROW_DEVIATION
-from ..population.rows import DETECTED, DOUBTFUL
+from ..population.rows import DETECTED, DOUBTFUL, UNOBSERVED
 from ..population.simulate import ChannelOutcome, simulate
 from ..sensitivity import CHANNELS
 from .design import SurveyDesign
@@ -22,6 +22,7 @@ FloatArray = npt.NDArray[np.float64]
 #: rows simulated at once, and in all
 _BATCH = 400_000
 _ALL = 3_000_000
+_COLUMNS = ["channel", "kind", "low", "high", "observed", "expected", "q05", "q95"]
 
 @dataclass(frozen=True)
 class Predictive:
@@ -57,11 +58,13 @@ def replicate(
     Returns
     -------
     dict of str to ChannelOutcome
-        Arrays of shape (D, n).
+        Arrays of shape (D, n); stars selected for known debris stand as unobserved: under some draws such stars are so
+        rare that they could not be drawn.
     """
-    size = len(design.rows)
+    blind = np.flatnonzero(design.rows.blind)
+    size = len(blind)
     draws = max(np.shape(value)[0] for value in theta.values() if np.ndim(value))
-    rows = design.rows.take(np.tile(np.arange(size), draws))
+    rows = design.rows.take(np.tile(blind, draws))
     spread = {
         key: value if np.ndim(value) == 0 else np.repeat(value, size, axis=0)
         for key, value in theta.items()
@@ -69,12 +72,17 @@ def replicate(
     if GROUP_RAW in spread:
         spread[ROW_DEVIATION] = spread.pop(GROUP_RAW)[np.arange(len(rows)), rows.group]
     drawn = simulate(rng, problem, rows, spread)
-    return {
-        name: ChannelOutcome(
-            *(getattr(item, part).reshape(draws, size) for part in ("outcome", "value", "genuine", "truth"))
-        )
-        for name, item in drawn.channels.items()
-    }
+    found = {}
+    for name, item in drawn.channels.items():
+        outcome = np.full((draws, len(design.rows)), UNOBSERVED, dtype=object)
+        value, truth = np.full(outcome.shape, np.nan), np.full(outcome.shape, np.nan)
+        genuine = np.zeros(outcome.shape, dtype=bool)
+        outcome[:, blind] = item.outcome.reshape(draws, size)
+        value[:, blind] = item.value.reshape(draws, size)
+        truth[:, blind] = item.truth.reshape(draws, size)
+        genuine[:, blind] = item.genuine.reshape(draws, size)
+        found[name] = ChannelOutcome(outcome.astype(str), value, genuine, truth)
+    return found
 
 def predictive_check(
     problem: Problem, design: SurveyDesign, theta: Mapping[str, FloatArray], seed: int
@@ -93,6 +101,8 @@ def predictive_check(
     -------
     Predictive
     """
+    if not design.rows.blind.any():
+        return Predictive(pd.DataFrame(columns=_COLUMNS), float("nan"), 0)
     rng = np.random.default_rng([seed, 11])
     available = max(np.shape(value)[0] for value in theta.values() if np.ndim(value))
     replicates = int(np.clip(_ALL // max(len(design.rows), 1), 50, min(available, 4000)))
@@ -122,6 +132,7 @@ def _observed(problem: Problem) -> dict[str, ChannelOutcome]:
     found = {}
     for name, channel in problem.rows.channels.items():
         listed = np.where(np.isin(channel.outcome, (DETECTED, DOUBTFUL)), DETECTED, channel.outcome)
+        listed = np.where(problem.rows.blind, listed, UNOBSERVED)
         value = np.where(listed == DETECTED, channel.value, np.nan)
         nothing = np.full(listed.shape, np.nan)
         found[name] = ChannelOutcome(listed[None], value[None], (listed == DETECTED)[None], nothing[None])
@@ -130,7 +141,7 @@ def _observed(problem: Problem) -> dict[str, ChannelOutcome]:
 def _bins(problem: Problem, design: SurveyDesign) -> list[dict[str, object]]:
     bins: list[dict[str, object]] = []
     for name in problem.channels:
-        limit = design.rows.channels[name].limit
+        limit = np.where(design.rows.blind, design.rows.channels[name].limit, np.nan)
         finite = limit[np.isfinite(limit)]
         if not finite.size:
             continue
@@ -148,7 +159,7 @@ def _bins(problem: Problem, design: SurveyDesign) -> list[dict[str, object]]:
 
 def _value_bins(problem: Problem, name: str) -> list[dict[str, object]]:
     channel = problem.rows.channels[name]
-    values = channel.value[np.isfinite(channel.value)]
+    values = channel.value[np.isfinite(channel.value) & problem.rows.blind]
     if values.size < 8:
         return []
     inner = np.quantile(values, [0.2, 0.4, 0.6, 0.8])
