@@ -333,7 +333,7 @@ def _tree(
     part = {key: value[index] if np.ndim(value) else value for key, value in theta.items()}
     prior_u = np.concatenate(
         [
-            item.unconstrain(item.prior.sample(rng, _PRIOR_DRAWS * item.size)).reshape(_PRIOR_DRAWS, item.size)
+            item.unconstrain(item.sample_prior(rng, _PRIOR_DRAWS * item.size)).reshape(_PRIOR_DRAWS, item.size)
             for item in problem.free
         ],
         axis=1,
@@ -358,7 +358,7 @@ def _log_priors(problem: Problem, theta: Mapping[str, FloatArray]) -> dict[str, 
     found = {}
     for item in problem.free:
         values = theta[item.name]
-        density = np.asarray(item.prior.logpdf(values))
+        density = np.asarray(item.prior.logpdf(1 / values if item.inverse else values))
         found[item.name.replace("[", "_").rstrip("]")] = density if density.ndim == 1 else density.sum(axis=1)
     return found
 

@@ -38,11 +38,13 @@ class PytensorOps:
     @staticmethod
     def log_ndtr(x: Array) -> Array:
         """Log of the normal distribution function, by erfc: a third of the cost of the library's log-CDF."""
-        near = pt.log(0.5 * pt.erfc(-_SQRT_HALF * pt.maximum(x, _FAR)))
+        near = 0.5 * pt.erfc(-_SQRT_HALF * pt.maximum(x, _FAR))
         far = pt.minimum(x, _FAR)
         square = 1 / (far * far)
-        series = pt.log1p(-square * (1 - square * (3 - square * (15 - 105 * square))))
-        return pt.switch(x > _FAR, near, -0.5 * far * far - pt.log(-far) - _HALF_LOG_2PI + series)
+        series = 1 - square * (1 - square * (3 - square * (15 - 105 * square)))
+        # one logarithm for both branches, since both are always worked out
+        inside = x > _FAR
+        return pt.log(pt.switch(inside, near, -series / far)) - pt.switch(inside, 0.0, 0.5 * far * far + _HALF_LOG_2PI)
 
     @staticmethod
     def logaddexp(x: Array, y: Array) -> Array:

@@ -186,7 +186,7 @@ def starting_points(problem: Problem) -> FloatArray:
     rng = np.random.default_rng(0)
     centre, spread = [], []
     for parameter in problem.free:
-        drawn = parameter.unconstrain(parameter.prior.sample(rng, 200))
+        drawn = parameter.unconstrain(parameter.sample_prior(rng, 200))
         centre += [float(np.median(drawn))] * parameter.size
         spread += [float(np.std(drawn))] * parameter.size
     base = np.array(centre)

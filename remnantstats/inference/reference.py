@@ -64,7 +64,7 @@ def fraction_at(
     if not problem.groups and not any(shift.values()):
         return draws, prior, text
     rng = np.random.default_rng(0)
-    drawn = {item.name: item.prior.sample(rng, _PRIOR_DRAWS) for item in problem.parameters if item.size == 1}
+    drawn = {item.name: item.sample_prior(rng, _PRIOR_DRAWS) for item in problem.parameters if item.size == 1}
     return _shifted(problem, posterior, shift, 1), _shifted(problem, drawn, shift, 2), text
 
 

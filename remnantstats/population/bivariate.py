@@ -91,18 +91,28 @@ def log_phi2_value(ops: ArrayOps, h: Array, k: Array, r: Array) -> Array:
     outward = ops.where(r < 0, -slope, slope)
     steep = ops.where(tail | past, ops.abs(slope), ops.maximum(outward, 0.0))
     length = ops.minimum(room, _REACH / ops.maximum(steep, 1e-3))
+    # the exponent is −(h² + z²)/2 with z = (k − r h)/√(1 − r²), and z moves at the rate (h − r k)/(1 − r²) per radian
+    per_radian = ops.where(tail | past, 1.0, 0.5 * (1 + end * end))
+    fall = per_radian * ops.minimum(_fall(ops, h, k, r, rest, root), _fall(ops, k, h, r, rest, root))
+    length = ops.where(steep > 1e-3, ops.minimum(length, fall), length)
     direction = ops.where(tail, -1.0, ops.where(past, 1.0, ops.where(r < 0, 1.0, -1.0)))
     at_end = -0.5 * (h * h + k * k - 2 * r * h * k) / rest
     # the integrand peaks at the end, or, in the first form, near it or near v = 0
     top = ops.where(tail | past, at_end, ops.maximum(at_end, -0.5 * (h * h + k * k)))
     log_integral = _log_integral(ops, h, k, end, direction * length, top) + ops.log(ops.maximum(length, 1e-300))
 
-    both = ops.log_ndtr(h) + ops.log_ndtr(k)
-    lower = ops.log_ndtr(ops.minimum(h, k))
+    below_h, below_k = ops.log_ndtr(h), ops.log_ndtr(k)
+    both, lower = below_h + below_k, ops.minimum(below_h, below_k)
     # a difference only where the two are of different size: elsewhere the other forms are chosen
     start = ops.where(past, lower, both)
     minus = start + ops.log1mexp(ops.minimum(log_integral - start, -1e-300))
     return ops.where(tail, log_integral, ops.where(past | (r < 0), minus, ops.logaddexp(both, log_integral)))
+
+
+def _fall(ops: ArrayOps, h: Array, k: Array, r: Array, rest: Array, root: Array) -> Array:
+    """Angle over which the integrand falls by the reach, from the quadratic growth of its exponent."""
+    z = ops.abs(k - r * h) / root
+    return (ops.sqrt(z * z + 2 * _REACH) - z) * rest / ops.maximum(ops.abs(h - r * k), 1e-12)
 
 
 def _inside(ops: ArrayOps, h: Array, k: Array, r: Array) -> tuple[Array, Array, Array]:
@@ -112,12 +122,15 @@ def _inside(ops: ArrayOps, h: Array, k: Array, r: Array) -> tuple[Array, Array, 
 
 
 def _log_integral(ops: ArrayOps, h: Array, k: Array, end: Array, reach: Array, top: Array) -> Array:
-    """Log mean of the integrand over the half-angles from `end` to `end + reach`; `top` is about its largest exponent."""
+    """Log mean of the integrand over half-angles from `end` to `end + reach`; `top` is about its largest exponent."""
     v = ops.trailing(end) + ops.trailing(reach) * _NODES
     square = 1 + v * v
     # a node never lies on v = ±1 but may round to it
-    up, down = ops.maximum((1 + v) * (1 + v), 1e-30), ops.maximum((1 - v) * (1 - v), 1e-30)
-    # (h² + k² − 2hk sin t) / cos² t
-    spread = square / up * (ops.trailing((h - k) * (h - k)) * square / down + ops.trailing(2 * h * k))
-    terms = ops.exp(-0.5 * spread - ops.trailing(top)) * (2 * _WEIGHTS / square)
+    down, up = (1 - v) * (1 - v), (1 + v) * (1 + v)
+    both = ops.maximum(up * down, 1e-60)
+    inverse = 1 / (both * square)
+    # (h² + k² − 2hk sin t) / cos² t; one division a node serves this and the weight 2 / (1 + v²)
+    spread = square * square * inverse * (ops.trailing((h - k) * (h - k)) * square + ops.trailing(2 * h * k) * down)
+    exponent = ops.minimum(-0.5 * spread - ops.trailing(top), 600.0)
+    terms = ops.exp(exponent) * (both * inverse * (2 * _WEIGHTS))
     return ops.log(ops.sum_last(terms)) + top - _LOG_2PI
