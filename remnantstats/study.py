@@ -325,6 +325,9 @@ def _write_report(result: RunResult) -> Path:
         provenance=_provenance(result),
         marks=result.marks,
         transfer=study.transfer,
+        comparison=result.comparison,
+        fits=result.fits,
+        stacked=study.file.model.stacking and result.comparison is not None,
     )
     return write_report(contents, result.folder)
 
@@ -378,5 +381,5 @@ def _plain(check: dict[str, Any]) -> dict[str, Any]:
 
 
 def _priors(fit: Fit) -> dict[str, Any]:
-    return {item.name: item.prior.model_dump(mode="json") for item in fit.problem.parameters}
+    return {item.name: item.prior.model_dump(mode="json", by_alias=True) for item in fit.problem.parameters}
 

@@ -38,7 +38,8 @@ def compiled_density(model: Any) -> Callable[[FloatArray], tuple[float, FloatArr
     u = pt.vector("unconstrained", dtype="float64")
     parts, at = {}, 0
     for variable in model.value_vars:
-        size = int(np.prod(model.initial_point()[variable.name].shape, dtype=int))
+        # the one vector is that of the groups; asking the model for its shapes would compile a function
+        size = 1 if variable.ndim == 0 else len(model.coords["group"])
         part = u[at] if variable.ndim == 0 else u[at : at + size]
         parts[variable] = part
         at += size

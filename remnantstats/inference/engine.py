@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import time
+import warnings
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any, Protocol
@@ -208,7 +209,10 @@ def _sampled(
 ) -> _Draws:
     # imported here for start-up time alone: this loads PyMC and the compiler
     clock.stage("compilation")
-    from .nuts import CHAINS, NutsSampler
+    with warnings.catch_warnings():
+        # the compiler's C side misses a linear-algebra library that the numba side, used here, does not need
+        warnings.filterwarnings("ignore", message=".*could not link to a BLAS", category=UserWarning)
+        from .nuts import CHAINS, NutsSampler
 
     sampler = NutsSampler(problem, seed, fast)
     size = _FIRST

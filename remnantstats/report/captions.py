@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any, NamedTuple
 
 import numpy as np
+import numpy.typing as npt
 import pandas as pd
 
 from ..inference import Fit
+from ..inference.compare import Comparison
 from ..mission import MissionSize
 from ..occurrence import OccurrencePrior
 from ..population import parameters as names
@@ -15,7 +18,9 @@ from ..population.distributions import describe
 from ..population.quantities import Thresholds
 from ..sensitivity import CHANNELS
 from .facts import (
+    blind_fraction,
     channel_fraction,
+    companion,
     depth_bins,
     efficiency_at,
     median_depth,
@@ -23,6 +28,7 @@ from .facts import (
     sample_fraction,
     smallest_seen,
 )
+from .figures_models import above_rows
 from .figures_sample import across
 from .glossary import channel_noun, define, threshold_text
 from .numbers import chance, count, measure, number, row_measure
@@ -134,13 +140,22 @@ def above(fit: Fit, channel: str, thresholds: Thresholds) -> Words:
             "rests on "
             "the assumed shape."
         )
+    steps = companion(fit, channel)
+    if len(steps):
+        caption += (
+            f" Thin steps: Kaplan–Meier over the {reference_noun(fit)}s, limits as left-censored, from the deepest "
+            "limit upwards; a visual check without an assumed shape, which knows neither errors nor ceilings nor "
+            "spurious detections."
+        )
     stem = "debris_fraction_above" if channel == "pollution" else "dusty_fraction_above"
     known = set(fit.table["quantity"])
     rows = [(value, f"{stem}[{value:g}]") for value in thresholds.of(channel) if f"{stem}[{value:g}]" in known]
     said = "; ".join(
         f"above {threshold_text(channel, value)}: {row_measure(row_of(fit, name))}" for value, name in rows
     )
-    return Words(f"Fraction above a given {noun}", caption, f"Falling curve of the fraction above T. {said}.")
+    counted = f" Kaplan–Meier steps fall from {number(steps['fraction'].iloc[0])}." if len(steps) else ""
+    text = f"Falling curve of the fraction above T. {said}.{counted}"
+    return Words(f"Fraction above a given {noun}", caption, text)
 
 
 def group_rows(fit: Fit) -> pd.DataFrame:
@@ -254,3 +269,40 @@ def predictive(fit: Fit) -> Words:
     channels = ", ".join(CHANNELS[name].label for name in fit.problem.channels)
     alternative = f"Observed and replicated counts, {channels}. {caption}"
     return Words("Would the model give such a survey?", caption, alternative)
+
+
+def prior_predictive(fit: Fit, channel: str, shares: npt.NDArray[np.float64]) -> Words:
+    """Words for what the prior expects to be detected."""
+    raw = blind_fraction(fit, channel)
+    low, middle, high = np.quantile(shares, [0.05, 0.5, 0.95])
+    below, within = float((shares < raw.value).mean()), float((shares <= raw.value).mean())
+    caption = (
+        f"Share of the blind stars that {len(shares)} surveys of this design would detect, each with parameters from "
+        f"the prior, before any star is looked at: median {number(middle)}, 90 % of them {number(low)} to {number(high)}. "
+        f"Dotted: this survey, {number(raw.value)}, "
+    )
+    if within == 0 or below == 1:
+        caption += "outside all of them: the prior did not expect it."
+    else:
+        caption += f"with {100 * below:.0f} % of them below it. A wide histogram says that the prior leaves it open."
+    text = f"Histogram of the detected share: 5, 50 and 95 % points {number(low)}, {number(middle)}, {number(high)}; "
+    text += f"this survey {number(raw.value)}."
+    title = "What the prior expects" + (f": {channel_noun(channel)}" if len(fit.problem.channels) > 1 else "")
+    return Words(title, caption, text)
+
+
+def models(fits: Sequence[Fit], comparison: Comparison, channel: str) -> Words:
+    """Words for the fraction above a threshold under each model."""
+    noun = channel_noun(channel)
+    said = []
+    for name in [*(fit.model.name for fit in fits), "stacked"]:
+        rows = above_rows(comparison, channel, name)
+        each = [f"{row_measure(row)} above {threshold_text(channel, row.threshold)}" for row in rows.itertuples()]
+        said += [f"{name}: {', '.join(each)}"] if each else []
+    caption = (
+        f"Share of all white dwarfs whose {noun} exceeds T under each model: medians and 68 % bands, told apart by "
+        "line style. Diamonds, at the stated thresholds: stacked, the models averaged by their weights, with 68 % "
+        "intervals. Where the curves part, the result hangs on the model."
+    )
+    title = f"Fraction above a given {noun}, by model"
+    return Words(title, caption, f"Falling curves, one a model. {'; '.join(said)}.")

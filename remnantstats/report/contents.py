@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from typing import NamedTuple
 
 from ..inference import Fit
+from ..inference.compare import Comparison
 from ..mission import MissionSize
 from ..occurrence import OccurrencePrior
 from ..occurrence.settings import NO_BASIS, Assumption, TransferSettings
@@ -70,6 +71,12 @@ class ReportContents:
         Further assumptions, shown after those found in fit, channels, prior and plan.
     references : tuple of str
         Further sources, shown after those of the methods.
+    comparison : Comparison or None
+        Where the study names several models.
+    fits : tuple of Fit
+        Those compared, the leading fit first.
+    stacked : bool
+        Whether the fraction carried to planets is that of the stacked models.
     """
 
     title: str
@@ -83,6 +90,9 @@ class ReportContents:
     transfer: TransferSettings | None = None
     assumptions: tuple[AssumptionRow, ...] = ()
     references: tuple[str, ...] = ()
+    comparison: Comparison | None = None
+    fits: tuple[Fit, ...] = ()
+    stacked: bool = False
 
     @property
     def all_marks(self) -> tuple[str, ...]:

@@ -12,18 +12,25 @@ import scipy.special
 import scipy.stats
 
 from ..inference import Fit
+from ..inference.companion import fraction_above_steps
+from ..inference.design import survey_design
+from ..inference.predictive import replicate
 from ..population import parameters as names
 from ..population.quantities import log_share_above, median_limit
+from ..population.rows import DETECTED, DOUBTFUL, LIMIT
 from ..sensitivity import CHANNELS
 
 __all__ = [
     "RawFraction",
+    "blind_fraction",
     "channel_fraction",
+    "companion",
     "density",
     "depth_bins",
     "fraction_above",
     "median_depth",
     "population",
+    "prior_detected",
     "raw_fraction",
     "reference_noun",
     "smallest_seen",
@@ -34,6 +41,9 @@ FloatArray = npt.NDArray[np.float64]
 CENTRAL = 0.6827
 _CURVE_DRAWS = 1000
 _BINS = 5
+_PRIOR_DRAWS = 200
+#: stars that replicated surveys of the prior hold at most: enough for a share
+_PRIOR_STARS = 2000
 
 
 @dataclass(frozen=True)
@@ -90,6 +100,11 @@ def sample_fraction(fit: Fit, channel: str, where: npt.NDArray[np.bool_] | None 
     """Raw fraction over the reference stars, or over the blind observed stars in `where`."""
     use = reference_stars(fit, channel) if where is None else blind_observed(fit, channel) & where
     return raw_fraction(int((fit.stars[channel][use] == "detected").sum()), int(use.sum()))
+
+
+def blind_fraction(fit: Fit, channel: str) -> RawFraction:
+    """Raw fraction over all blind observed stars."""
+    return sample_fraction(fit, channel, np.ones(len(fit.stars), dtype=bool))
 
 
 def channel_fraction(fit: Fit, channel: str) -> FloatArray:
@@ -187,6 +202,56 @@ def _depth_row(
         "expected_low": float(low),
         "expected_high": float(high),
     }
+
+
+def companion(fit: Fit, channel: str) -> pd.DataFrame:
+    """Non-parametric fraction above each value, from the deepest limit upwards, over the reference stars.
+
+    Parameters
+    ----------
+    fit : Fit
+    channel : {"pollution", "excess"}
+
+    Returns
+    -------
+    pandas.DataFrame
+        `value` (log10), `fraction`, `low`, `high` (95 % pointwise); each fraction holds up to the next value. Empty
+        where nothing was detected.
+    """
+    rows = fit.problem.rows.take(np.flatnonzero(reference_stars(fit, channel)))
+    own = rows.channels[channel]
+    table = fraction_above_steps(replace(fit.problem, rows=rows), channel)
+    undetected = own.limit[(own.outcome == LIMIT) & np.isfinite(own.limit)]
+    if not len(table) or not undetected.size:
+        return table
+    return table[table["value"] >= undetected.min() - 1e-9].reset_index(drop=True)
+
+
+def prior_detected(fit: Fit) -> dict[str, FloatArray]:
+    """Share of the blind observed stars that surveys drawn from the prior list as detected, by channel; shape (200,).
+
+    Of a large sample, stars evenly spread over the table stand for all.
+    """
+    problem = fit.problem
+    rng = np.random.default_rng([fit.seed, 17])
+    prior = [
+        item.unconstrain(item.sample_prior(rng, _PRIOR_DRAWS * item.size)).reshape(_PRIOR_DRAWS, item.size)
+        for item in problem.free
+    ]
+    design = survey_design(problem, fit.seed)
+    blind = np.flatnonzero(design.rows.blind)
+    chosen = blind[:: max(1, -(-len(blind) // _PRIOR_STARS))]
+    if not prior or not chosen.size:
+        return {}
+    part = replace(design, rows=design.rows.take(chosen))
+    theta = problem.theta(np.concatenate(prior, axis=1))
+    found = {}
+    for name, item in replicate(rng, problem, part, theta).items():
+        detected = np.isin(item.outcome, (DETECTED, DOUBTFUL)).sum(axis=1)
+        observed = (detected + (item.outcome == LIMIT).sum(axis=1)).astype(float)
+        if observed.all():
+            found[name] = detected / observed
+    return found
 
 
 def smallest_seen(fit: Fit, channel: str, share: float = 0.5) -> float:

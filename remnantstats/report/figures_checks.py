@@ -3,15 +3,18 @@
 from __future__ import annotations
 
 import numpy as np
+import numpy.typing as npt
 import pandas as pd
 from matplotlib.axes import Axes
+from matplotlib.ticker import PercentFormatter
 
 from ..inference import Fit
+from .facts import blind_fraction, prior_detected
 from .glossary import AXES, channel_noun
 from .numbers import number
 from .style import COLOURS, legend, on_axes, styled
 
-__all__ = ["plot_predictive", "predictive_kinds"]
+__all__ = ["draw_prior_predictive", "plot_predictive", "plot_prior_predictive", "predictive_kinds"]
 
 _JOINT = {
     ("detected", "detected"): "rate and dust",
@@ -60,6 +63,42 @@ def plot_predictive(fit: Fit, channel: str = "", kind: str = "depth", ax: Axes |
     ax.set_ylim(0, 1.12 * max(1.0, float(np.max([high.max(initial=0), rows["observed"].max() if len(rows) else 0]))))
     ax.tick_params(axis="x", length=0, top=False)
     legend(ax, 2)
+    return ax
+
+
+@styled
+def plot_prior_predictive(fit: Fit, channel: str = "", ax: Axes | None = None) -> Axes:
+    """Draw the share of stars detected in surveys drawn from the prior, with the observed share marked.
+
+    Parameters
+    ----------
+    fit : Fit
+    channel : {"pollution", "excess"}, optional
+        Default the first in use.
+    ax : matplotlib.axes.Axes, optional
+        Default new axes.
+
+    Returns
+    -------
+    matplotlib.axes.Axes
+    """
+    channel = channel or fit.problem.channels[0]
+    return draw_prior_predictive(fit, channel, prior_detected(fit).get(channel, np.array([])), on_axes(ax))
+
+
+@styled
+def draw_prior_predictive(fit: Fit, channel: str, shares: npt.NDArray[np.float64], ax: Axes) -> Axes:
+    """Draw shares simulated before."""
+    ax.hist(
+        shares, bins=np.linspace(0, 1, 21).tolist(), color=COLOURS["wide"], edgecolor=COLOURS["prior"], linewidth=0.8,
+        label=f"{len(shares)} surveys drawn from the prior",
+    )
+    raw = blind_fraction(fit, channel)
+    if raw.observed:
+        ax.axvline(raw.value, color=COLOURS["mark"], linestyle=":", linewidth=1.5, label="this survey")
+    ax.set(xlabel=f"Share of blind stars detected ({channel_noun(channel)})", ylabel="Surveys", xlim=(0, 1))
+    ax.xaxis.set_major_formatter(PercentFormatter(1, decimals=0, symbol=" %"))
+    legend(ax, 1)
     return ax
 
 

@@ -6,6 +6,7 @@ from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+import pandas as pd
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator
@@ -13,7 +14,7 @@ from matplotlib.ticker import MaxNLocator
 from ..inference import Fit
 from ..population import parameters as names
 from ..population.parameters import Parameter
-from .facts import density, fraction_above, median_depth, sample_fraction
+from .facts import companion, density, fraction_above, median_depth, sample_fraction
 from .glossary import AXES, define, parameter_quantity, short_label
 from .style import COLOURS, WIDE, label_text, legend, new_figure, on_axes, styled
 
@@ -29,6 +30,7 @@ __all__ = [
 
 FloatArray = npt.NDArray[np.float64]
 _POINTS = 61
+STEPS = "Kaplan–Meier,\nlimits as left-censored"
 _LEVELS = (0.05, 0.1587, 0.5, 0.8413, 0.95)
 
 
@@ -137,6 +139,12 @@ def plot_fraction_above(fit: Fit, channel: str = "", ax: Axes | None = None) -> 
     ax.fill_between(grid, low5, high95, color=COLOURS["wide"], linewidth=0, label="90 % interval")
     ax.fill_between(grid, low, high, color=COLOURS["band"], linewidth=0, label="68 % interval")
     ax.plot(grid, middle, color=COLOURS["found"], label="median")
+    steps = companion(fit, channel)
+    if len(steps):
+        ax.step(
+            [*steps["value"], max(grid[-1], steps["value"].iloc[-1])], [*steps["fraction"], steps["fraction"].iloc[-1]],
+            where="post", color=COLOURS["mark"], linewidth=0.8, zorder=1.9, label=STEPS,
+        )
     depth = median_depth(fit, channel)
     if np.isfinite(depth) and depth > grid[0]:
         ax.axvspan(
@@ -148,10 +156,15 @@ def plot_fraction_above(fit: Fit, channel: str = "", ax: Axes | None = None) -> 
         xlabel=f"Threshold T, {AXES[channel].split(', ', 1)[1]}",
         ylabel="Fraction of stars above T",
         xlim=(grid[0], grid[-1]),
-        ylim=(0, min(1.0, 1.1 * high95.max())),
+        ylim=(0, min(1.0, 1.1 * max(high95.max(), _highest(steps, grid)))),
     )
     legend(ax, 2)
     return ax
+
+
+def _highest(steps: pd.DataFrame, grid: FloatArray) -> float:
+    """Highest step that lies within the grid."""
+    return float(steps["fraction"][steps["value"] <= grid[-1]].max()) if len(steps) else 0.0
 
 
 def shown_parameters(fit: Fit) -> tuple[Parameter, ...]:

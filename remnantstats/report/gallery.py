@@ -12,13 +12,18 @@ from matplotlib.figure import Figure
 from ..inference import Fit
 from . import captions
 from .contents import ReportContents
-from .figures_checks import plot_predictive, predictive_kinds
+from .facts import prior_detected
+from .figures_checks import draw_prior_predictive, plot_predictive, predictive_kinds
 from .figures_fraction import plot_fraction, plot_fraction_above, plot_groups, plot_parameters, shown_parameters
 from .figures_mission import plot_chance, plot_distances, plot_occurrence, plot_yield
+from .figures_models import plot_models
 from .figures_sample import plot_completeness, plot_correction, plot_sample
 from .style import HALF, WIDE, new_figure, styled
 
-__all__ = ["Plate", "gallery"]
+__all__ = ["MODELS", "Plate", "gallery"]
+
+#: above so many stars the prior predictive surveys would take too long
+_MANY = 20_000
 
 
 @dataclass(frozen=True)
@@ -47,12 +52,13 @@ class Plate:
 
 
 SEEN, OUT, PLANETS, CHECKS = "What was seen", "What is out there", "Planets and mission", "Model against data"
+MODELS = "Models compared"
 
 
 def gallery(contents: ReportContents) -> list[Plate]:
     """List the figures that the results allow, in the order of the page."""
     plates = _seen(contents) + _out_there(contents) + _planets(contents)
-    return plates + _checks(contents)
+    return plates + _checks(contents) + _before(contents.fit) + _models(contents)
 
 
 def _single(plot: Callable[..., Any], *args: Any, wide: bool = False, height: float = 2.5) -> Callable[[], Figure]:
@@ -144,3 +150,27 @@ def _checks(contents: ReportContents) -> list[Plate]:
         return figure
 
     return [Plate("predictive", CHECKS, captions.predictive(fit), draw, len(kinds) > 1)]
+
+
+def _before(fit: Fit) -> list[Plate]:
+    """What the prior alone would expect to be detected."""
+    if len(fit.stars) > _MANY:
+        return []
+    plates = []
+    for channel, shares in prior_detected(fit).items():
+        end = f"_{channel}" if len(fit.problem.channels) > 1 else ""
+        draw = _single(draw_prior_predictive, fit, channel, shares)
+        plates.append(Plate(f"prior_predictive{end}", CHECKS, captions.prior_predictive(fit, channel, shares), draw))
+    return plates
+
+
+def _models(contents: ReportContents) -> list[Plate]:
+    comparison, fits = contents.comparison, contents.fits
+    if comparison is None or len(fits) < 2:
+        return []
+    plates = []
+    for channel in contents.fit.problem.channels:
+        end = f"_{channel}" if len(contents.fit.problem.channels) > 1 else ""
+        draw = _single(plot_models, fits, comparison, channel, height=2.9)
+        plates.append(Plate(f"models{end}", MODELS, captions.models(fits, comparison, channel), draw))
+    return plates

@@ -11,11 +11,13 @@ from . import captions
 from .contents import ReportContents
 from .facts import RawFraction, channel_fraction, efficiency_at, median_depth, reference_noun, sample_fraction
 from .glossary import channel_noun, define, threshold_text
-from .numbers import chance, count, measure, number, row_measure
+from .numbers import chance, count, measure, number, row_measure, typeset
 
-__all__ = ["Step", "answer", "chain", "extrapolations", "notes", "validity"]
+__all__ = ["Step", "answer", "chain", "extrapolations", "models_compared", "notes", "validity"]
 
 _SHOWN = {"pollution": 7.0, "excess": -3.0}
+#: a difference in predictive score below this is small whatever its standard error says
+_SMALL = 4.0
 _WORD = {"pollution": "show debris", "excess": "show warm dust"}
 
 
@@ -193,7 +195,7 @@ def _planets(contents: ReportContents) -> list[Step]:
 def reference(contents: ReportContents) -> str:
     """Say to which stars the fraction refers that is carried to planets."""
     said = contents.prior.reference if contents.prior is not None else ""
-    return said.replace("= -", "= −") or "the debris fraction at its reference"
+    return typeset(said) or "the debris fraction at its reference"
 
 
 def _targets(plan: MissionSize) -> Step:
@@ -235,8 +237,57 @@ def notes(contents: ReportContents) -> list[str]:
     found = [*contents.fit.notes]
     found += contents.prior.notes if contents.prior is not None else ()
     found += contents.plan.notes if contents.plan is not None else ()
-    sentences = [note[0].upper() + note[1:] for note in found if note]
+    sentences = [typeset(note[0].upper() + note[1:]) for note in found if note]
     return [text if text.endswith(".") else text + "." for text in dict.fromkeys(sentences)]
+
+
+def models_compared(contents: ReportContents) -> list[str]:
+    """Say which model leads, how surely, and which of them is carried on; nothing where one model alone was fitted."""
+    comparison = contents.comparison
+    if comparison is None:
+        return []
+    rows = list(comparison.table[comparison.table["model"] != "stacked"].itertuples())
+    best, rest = rows[0], rows[1:]
+    found = [f"'{best.model}' predicts the sample best."]
+    for row in rest:
+        gap, error = -float(row.elpd_difference), float(row.difference_se)
+        text = f"'{row.model}' is behind by {number(gap, 1)} ± {number(error, 1)}: "
+        if gap <= _SMALL:
+            text += f"a difference below {_SMALL:g} is too small to tell the two apart."
+        elif gap <= 2 * error:
+            text += "less than two standard errors; these data do not tell the two apart."
+        else:
+            text += "more than two standard errors; these data prefer the first."
+        found.append(text)
+    weights = _listed([f"'{name}' {number(weight)}" for name, weight in comparison.weights.items()])
+    result = row_measure(comparison.stacked)
+    label = define(contents.fit, contents.fit.fraction).label.lower()
+    found.append(f"Stacking weights: {weights}. Averaged by them, the {label} is {result}.")
+    found.append(_carried_model(contents))
+    unsure = [f"'{row.model}': {count(int(row.stars_above_k), 'star')}" for row in rows if row.stars_above_k > 0]
+    if unsure:
+        found.append(
+            f"Stars of too much influence for a sure score ({'; '.join(unsure)}) make the order of the models "
+            "provisional."
+        )
+    return found
+
+
+def _carried_model(contents: ReportContents) -> str:
+    first = f"'{contents.fit.model.name}', the model that the study names first"
+    if contents.prior is None:
+        return f"All other sections show {first}."
+    if contents.stacked:
+        return (
+            "The occurrence prior and all that follows from it come from the stacked fraction, as the study asks; all "
+            f"other sections show {first}."
+        )
+    best = "" if contents.comparison is None else contents.comparison.table["model"].iloc[0]
+    leads = "" if best == contents.fit.model.name else ", though it does not lead here"
+    return (
+        f"All other sections, the occurrence prior among them, come from {first}{leads}. The stacked fraction is "
+        "carried on only where the study sets stacking = true."
+    )
 
 
 def validity(contents: ReportContents) -> list[str]:

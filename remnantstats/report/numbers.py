@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from typing import Any
 
 __all__ = [
@@ -16,11 +17,14 @@ __all__ = [
     "plain_interval",
     "row_measure",
     "span",
+    "typeset",
 ]
 
 MINUS = "−"
 #: most decimals that are ever written
 _MOST = 6
+#: a hyphen before a figure, or in an exponent, that stands for a minus
+_HYPHEN = re.compile(r"(?<![\w)\]])-(?=\.?\d)|(?<=\de)-(?=\d)")
 
 
 def decimals_for(error: float, digits: int = 2) -> int:
@@ -93,6 +97,11 @@ def plain_interval(low: float, high: float, decimals: int) -> str:
 def plain(value: float) -> str:
     """Write a number as set by a person: no more digits than it has."""
     return f"{value:.6g}".replace("-", MINUS)
+
+
+def typeset(text: str) -> str:
+    """Give the negative numbers of a text true minus signs; words and ranges stay."""
+    return _HYPHEN.sub(MINUS, text)
 
 
 def chance(probability: float) -> str:

@@ -14,11 +14,20 @@ from markupsafe import Markup
 
 from ..files import make_folder, write_text
 from .contents import ReportContents, collect_assumptions
-from .gallery import Plate, gallery
-from .narrative import answer, chain, extrapolations, notes, validity
-from .numbers import count, number
+from .gallery import MODELS, Plate, gallery
+from .narrative import answer, chain, extrapolations, models_compared, notes, validity
+from .numbers import count, number, typeset
 from .style import save_figure
-from .tables import Cell, Table, checks_table, followup_table, mission_table, order_table, results_table
+from .tables import (
+    Cell,
+    Table,
+    checks_table,
+    followup_table,
+    mission_table,
+    models_table,
+    order_table,
+    results_table,
+)
 
 __all__ = ["render_page", "write_report"]
 
@@ -31,9 +40,16 @@ _SOURCES = (
     "J. Mach. Learn. Res. 25, 72.",
 )
 _DISTANCES = "Nearest neighbours: Hertz 1909, Math. Ann. 67, 387; Chandrasekhar 1943, Rev. Mod. Phys. 15, 1."
+_COMPANION = "Fraction without an assumed shape: Kaplan & Meier 1958, J. Am. Stat. Assoc. 53, 457."
+_COMPARISON = (
+    "Comparison of models: Vehtari, Gelman & Gabry 2017, Stat. Comput. 27, 1413; small differences: Sivula, Magnusson, "
+    "Matamoros & Vehtari 2020, arXiv:2008.10296; stacking: Yao, Vehtari, Simpson & Gelman 2018, "
+    "Bayesian Anal. 13, 917."
+)
 _SECTIONS = (
     ("reasoning", "How it follows"),
     ("figures", "Figures"),
+    ("models", "Models"),
     ("numbers", "Numbers"),
     ("followup", "Stars to look at"),
     ("assumptions", "Assumptions"),
@@ -89,13 +105,15 @@ def render_page(contents: ReportContents, plates: list[Plate], images: dict[str,
         loader=jinja2.PackageLoader("remnantstats.report"), autoescape=True, undefined=jinja2.StrictUndefined,
         trim_blocks=True,
     )
+    figures = _figures(plates, images)
     css, js = (_own(environment, name) for name in ("report.css", "report.js"))
     return environment.get_template("report.html.j2").render(
         css=css,
         js=js,
         policy=_policy(css, js),
-        figures=_figures(plates, images),
-        sections=_SECTIONS,
+        figures=[item for item in figures if item[0] != MODELS],
+        model_figures=[figure for section, shown in figures if section == MODELS for figure in shown],
+        sections=[item for item in _SECTIONS if item[0] != "models" or contents.comparison is not None],
         **_words(contents),
         **_tables(contents),
     )
@@ -133,6 +151,7 @@ def _words(contents: ReportContents) -> dict[str, Any]:
         "answer": list(zip(("Fraction", "Planets", "Mission"), answer(contents), strict=True)),
         "chain": chain(contents),
         "extrapolations": extrapolations(contents),
+        "compared": models_compared(contents),
         "validity": validity(contents),
         "notes": notes(contents),
         "verdict": _verdict(contents),
@@ -142,7 +161,8 @@ def _words(contents: ReportContents) -> dict[str, Any]:
 
 def _references(contents: ReportContents) -> tuple[str, ...]:
     far = contents.plan is not None and len(contents.plan.distances) > 0
-    return (*_SOURCES, *((_DISTANCES,) if far else ()), *contents.references)
+    compared = (_COMPARISON,) if contents.comparison is not None else ()
+    return (*_SOURCES, _COMPANION, *compared, *((_DISTANCES,) if far else ()), *contents.references)
 
 
 def _verdict(contents: ReportContents) -> str:
@@ -160,6 +180,7 @@ def _tables(contents: ReportContents) -> dict[str, Table | None]:
     plan = contents.plan
     return {
         "results": results_table(contents),
+        "models": None if contents.comparison is None else models_table(contents.fit, contents.comparison),
         "mission": None if plan is None else mission_table(plan),
         "order": None if plan is None else order_table(plan),
         "followup": followup_table(contents.fit),
@@ -171,7 +192,7 @@ def _tables(contents: ReportContents) -> dict[str, Table | None]:
 
 def _assumption_table(contents: ReportContents) -> Table:
     rows = [
-        (Cell(row.name), Cell(row.enters, "", "word"), Cell(row.description), Cell(row.basis))
+        (Cell(row.name), Cell(row.enters, "", "word"), Cell(typeset(row.description)), Cell(typeset(row.basis)))
         for row in collect_assumptions(contents)
     ]
     caption = "Every assumption, in the order in which it enters."

@@ -12,6 +12,7 @@ from typing import Any, TypeVar
 import matplotlib
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.backends.backend_pdf import FigureCanvasPdf
 from matplotlib.figure import Figure
 
 from ..files import write_bytes
@@ -113,7 +114,9 @@ def label_text(text: str, longest: int = 28) -> str:
 
 def legend(ax: Axes, columns: int = 1) -> None:
     """Place the legend above the axes, where it can hide nothing."""
-    ax.legend(loc="lower left", bbox_to_anchor=(0.0, 1.0), ncols=columns, columnspacing=1.2, handletextpad=0.5)
+    made = ax.legend(loc="lower left", bbox_to_anchor=(0.0, 1.0), ncols=columns, columnspacing=1.2, handletextpad=0.5)
+    for text in made.get_texts():
+        text.set_linespacing(0.95)
 
 
 @styled
@@ -134,15 +137,14 @@ def save_figure(figure: Figure, stem: Path) -> bytes:
     with warnings.catch_warnings():
         # a star's or a survey's name may hold signs that no font has; the page shows them
         warnings.filterwarnings("ignore", message="Glyph .* missing from")
-        png = _rendered(figure, "png", {"Software": None})
+        # straight to the canvas: Figure.savefig draws everything once more, to lay it out
+        figure.set_dpi(_DPI)
+        png, pdf = io.BytesIO(), io.BytesIO()
+        canvas: Any = FigureCanvasAgg(figure)
+        canvas.print_png(png, metadata={"Software": None})
         figure.set_layout_engine("none")
-        pdf = _rendered(figure, "pdf", {"CreationDate": None, "Creator": "remnantstats", "Producer": None})
-    write_bytes(stem.with_suffix(".png"), png)
-    write_bytes(stem.with_suffix(".pdf"), pdf)
-    return png
-
-
-def _rendered(figure: Figure, kind: str, metadata: dict[str, str | None]) -> bytes:
-    target = io.BytesIO()
-    figure.savefig(target, format=kind, dpi=_DPI, metadata=metadata)
-    return target.getvalue()
+        canvas = FigureCanvasPdf(figure)
+        canvas.print_pdf(pdf, metadata={"CreationDate": None, "Creator": "remnantstats", "Producer": None})
+    write_bytes(stem.with_suffix(".png"), png.getvalue())
+    write_bytes(stem.with_suffix(".pdf"), pdf.getvalue())
+    return png.getvalue()

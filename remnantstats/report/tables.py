@@ -9,15 +9,26 @@ import numpy as np
 import pandas as pd
 
 from ..inference import Fit
+from ..inference.checks import LIMITS
+from ..inference.compare import Comparison
 from ..mission import MissionSize
 from ..sensitivity import CHANNELS
 from . import captions
 from .contents import ReportContents
 from .facts import median_depth
 from .glossary import channel_noun, define
-from .numbers import chance, number, row_measure, span
+from .numbers import chance, number, row_measure, span, typeset
 
-__all__ = ["Cell", "Table", "checks_table", "followup_table", "mission_table", "order_table", "results_table"]
+__all__ = [
+    "Cell",
+    "Table",
+    "checks_table",
+    "followup_table",
+    "mission_table",
+    "models_table",
+    "order_table",
+    "results_table",
+]
 
 #: stars of the follow-up list, targets of the order of observation, that are shown
 FOLLOWED = 20
@@ -108,8 +119,8 @@ def checks_table(fit: Fit) -> Table:
         (
             Cell(check.name[0].upper() + check.name[1:]),
             Cell(_SIGNS[check.verdict], check.verdict, check.verdict),
-            Cell(check.message),
-            Cell(check.allowed),
+            Cell(typeset(check.message)),
+            Cell(typeset(check.allowed)),
         )
         for check in fit.checks
     ]
@@ -179,3 +190,39 @@ def order_table(plan: MissionSize) -> Table | None:
     caption = f"The first {len(rows)} of {len(plan.order)} targets, by falling completeness, then by rising distance."
     head = ("Order", "Target", "Distance (pc)", "Completeness", "Chance of at least one so far")
     return Table("order", caption, head, rows)
+
+
+def models_table(fit: Fit, comparison: Comparison) -> Table:
+    """Models side by side, and their stacked mixture."""
+    rows = []
+    for row in comparison.table.itertuples():
+        result = _value(row_measure(row), float(row.q50))
+        if row.model == "stacked":
+            blank = [Cell("–", "", "number")] * 5
+            rows.append((Cell("stacked (models averaged by weight)"), *blank, result))
+            continue
+        gap = float(row.elpd_difference)
+        behind = "leads" if gap == 0 else f"{number(gap, 1)} ± {number(row.difference_se, 1)}"
+        rows.append(
+            (
+                Cell(str(row.model)),
+                _value(f"{number(row.elpd, 1)} ± {number(row.elpd_se, 1)}", float(row.elpd)),
+                _value(behind, gap),
+                _value(number(row.weight), float(row.weight)),
+                _value(number(row.worst_k), float(row.worst_k)),
+                _value(str(int(row.stars_above_k)), float(row.stars_above_k)),
+                result,
+            )
+        )
+    label = define(fit, fit.fraction).label
+    head = (
+        "Model", "Predictive score (elpd)", "Difference from the best", "Weight", "Worst Pareto k",
+        f"Stars above {LIMITS.pareto_k}", label,
+    )
+    caption = (
+        "Leave-one-out comparison, best model first. Score: expected log density of a star left out, summed over the "
+        "stars, ± standard error; differences are taken star by star. Weight: share in the mixture that predicts best. "
+        f"Pareto k above {LIMITS.pareto_k} marks a star so influential that its term is unsure. Same numbers in "
+        "comparison.csv."
+    )
+    return Table("models", caption, head, rows)

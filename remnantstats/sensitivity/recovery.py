@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Literal
@@ -9,6 +10,7 @@ from typing import Literal
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
+import scipy.linalg
 import scipy.optimize
 import scipy.special
 import scipy.stats
@@ -194,6 +196,20 @@ def _falls(counts: list[list[int]]) -> bool:
     return bool(scipy.stats.fisher_exact(counts, alternative="greater").pvalue < _FALLS)
 
 
+def _curvature(function: Callable[[FloatArray], float], point: FloatArray, step: float = 1e-3) -> FloatArray:
+    """Second derivatives by central differences."""
+    steps = step * np.eye(len(point))
+    return np.array(
+        [
+            [
+                sum(i * j * function(point + i * one + j * two) for i in (1, -1) for j in (1, -1)) / (4 * step**2)
+                for two in steps
+            ]
+            for one in steps
+        ]
+    )
+
+
 def fit_efficiency(value: FloatArray, injected: IntArray, recovered: IntArray) -> EfficiencyFit:
     """Fit c Φ((x − L)/w) to counts by maximum posterior, with weak priors that keep a thin table finite.
 
@@ -220,7 +236,8 @@ def fit_efficiency(value: FloatArray, injected: IntArray, recovered: IntArray) -
     share = recovered / injected
     start = np.array([float(np.interp(0.5 * share.max(), np.maximum.accumulate(share), value)), np.log(0.2), 2.0])
     found = scipy.optimize.minimize(loss, start, method="Nelder-Mead", options={"maxiter": 4000, "xatol": 1e-6})
-    found = scipy.optimize.minimize(loss, found.x, method="BFGS")
-    error = float(np.sqrt(max(found.hess_inv[0, 0], 0.0)))
+    # the minimiser's own estimate of the curvature is not to be had: it starts from the unit matrix, and stops at once
+    covariance = scipy.linalg.pinvh(_curvature(loss, found.x))
+    error = float(np.sqrt(max(covariance[0, 0], 0.0)))
     limit, log_width, logit = found.x
     return EfficiencyFit(float(limit), float(np.exp(log_width)), float(scipy.special.expit(logit)), error)

@@ -12,6 +12,7 @@ import pytest
 
 from remnantstats.catalog import ChannelRules, RowRules, read_sample
 from remnantstats.inference import Fit, fit_problem
+from remnantstats.inference.compare import compare
 from remnantstats.mission import size_mission
 from remnantstats.occurrence import occurrence_prior
 from remnantstats.occurrence.settings import TransferSettings, parse_transfer
@@ -162,6 +163,14 @@ def grouped_contents(tmp_path_factory: pytest.TempPathFactory) -> ReportContents
     table = pollution_table(200, 6).drop(columns=["teff", "cooling_age"])
     table["survey"] = np.where(np.arange(200) % 3 == 0, HOSTILE, table["survey"])
     return contents_of(fitted(table, path), transfer=TRANSFER, title="Pooled")
+
+
+@pytest.fixture(scope="session")
+def compared_contents() -> ReportContents:
+    """Two models of one sample, the first without the age trend."""
+    table = pollution_table(150, 8)
+    fits = tuple(fitted(table, name) for name in ("steady", "cooling-trend"))
+    return contents_of(fits[0], transfer=TRANSFER, title="Compared", comparison=compare(fits, 1), fits=fits)
 
 
 @pytest.fixture(scope="session")

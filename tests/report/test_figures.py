@@ -1,5 +1,8 @@
 """Each figure gives axes with labels, units and what it promises to show."""
 
+import time
+from dataclasses import replace
+
 import matplotlib
 import numpy as np
 import pytest
@@ -7,14 +10,20 @@ import scipy.stats
 from matplotlib.axes import Axes
 
 from remnantstats import report
+from remnantstats.inference.companion import fraction_above_steps
+from remnantstats.report import gallery as gallery_module
 from remnantstats.report.facts import (
+    blind_fraction,
     channel_fraction,
+    companion,
     depth_bins,
     fraction_above,
     median_depth,
+    prior_detected,
     raw_fraction,
     sample_fraction,
 )
+from remnantstats.report.figures_models import STACKED, above_rows
 from remnantstats.report.gallery import gallery
 from remnantstats.report.style import label_text, save_figure
 
@@ -89,6 +98,63 @@ def test_the_extrapolated_part_is_hatched_and_named(fit):
     assert hatched[0].get_x() + hatched[0].get_width() == pytest.approx(median_depth(fit, "pollution"))
 
 
+@pytest.mark.parametrize("source", ["contents", "dust_contents"])
+def test_the_companion_is_drawn_from_the_deepest_limit_up(request, source):
+    fit = request.getfixturevalue(source).fit
+    channel = fit.problem.channels[0]
+    ax = report.plot_fraction_above(fit)
+    steps = companion(fit, channel)
+    line = next(item for item in ax.lines if item.get_label().startswith("Kaplan–Meier"))
+    assert line.get_drawstyle() == "steps-post" and line.get_linewidth() < 1
+    assert list(line.get_xdata()[:-1]) == list(steps["value"]) and list(line.get_ydata()[:-1]) == list(steps["fraction"])
+    stars = fit.stars[(fit.stars["inclusion"] == "blind") & (fit.stars[channel] == "limit")]
+    own = fit.problem.rows.channels[channel].limit[stars.index]
+    assert line.get_xdata()[0] == pytest.approx(own.min())
+    whole = fraction_above_steps(fit.problem, channel)
+    assert whole["value"].iloc[-len(steps) :].tolist() == steps["value"].tolist()
+    assert "limits as left-censored" in text_of(ax)
+
+
+def test_the_prior_expects_what_simulation_gives(contents, dust_contents):
+    for source in (contents, dust_contents):
+        fit = source.fit
+        start = time.process_time()
+        shares = prior_detected(fit)[fit.problem.channels[0]]
+        assert time.process_time() - start < 2  # about 0.2 s
+        assert shares.shape == (200,) and shares.min() >= 0 and shares.max() <= 1
+        # uniform prior of the fraction: no more than the hosts, half the stars on average, can be seen
+        assert 0.05 < shares.mean() < 0.55 and shares.std() > 0.1
+        np.testing.assert_array_equal(shares, prior_detected(fit)[fit.problem.channels[0]])
+        ax = report.plot_prior_predictive(fit)
+        raw = blind_fraction(fit, fit.problem.channels[0])
+        marked = next(line for line in ax.lines if line.get_label() == "this survey")
+        assert set(marked.get_xdata()) == {raw.value}
+        assert sum(patch.get_height() for patch in ax.patches) == 200
+
+
+def test_the_prior_is_not_simulated_for_very_many_stars(contents):
+    stars = contents.fit.stars
+    many = stars.iloc[np.arange(20_001) % len(stars)].reset_index(drop=True)
+    assert any(plate.name == "prior_predictive" for plate in gallery(contents))
+    assert gallery_module._before(replace(contents.fit, stars=many)) == []
+
+
+def test_models_are_told_apart_by_line_and_colour(compared_contents):
+    fits, comparison = compared_contents.fits, compared_contents.comparison
+    ax = report.plot_models(fits, comparison)
+    for fit in fits:
+        assert f"{fit.model.name}, weight {comparison.weights[fit.model.name]:.2f}" in text_of(ax)
+    curves = [line for line in ax.lines if "weight" in line.get_label()]
+    assert len({line.get_linestyle() for line in curves}) == len({line.get_color() for line in curves}) == 2
+    assert STACKED in text_of(ax)
+    rows = above_rows(comparison, "pollution")
+    points = next(line for line in ax.lines if line.get_marker() == "D")
+    assert list(points.get_xdata()) == list(rows["threshold"]) and list(points.get_ydata()) == list(rows["q50"])
+    first = curves[0]
+    at_seven = np.interp(7.0, first.get_xdata(), first.get_ydata())
+    assert at_seven == pytest.approx(above_rows(comparison, "pollution", "steady").set_index("threshold")["q50"][7], abs=0.01)
+
+
 def test_needed_numbers_are_marked_and_the_unreachable_said(contents):
     ax = report.plot_chance(contents.plan)
     for row in contents.plan.needs.itertuples():
@@ -149,8 +215,8 @@ def test_the_users_own_style_stays(fit):
     assert dict(matplotlib.rcParams) == before
 
 
-def test_nothing_is_cut_off(contents, dust_contents, grouped_contents):
-    for source in (contents, dust_contents, grouped_contents):
+def test_nothing_is_cut_off(contents, dust_contents, grouped_contents, compared_contents):
+    for source in (contents, dust_contents, grouped_contents, compared_contents):
         for plate in gallery(source):
             figure = plate.draw()
             figure.canvas.draw()

@@ -7,12 +7,13 @@ import sys
 import time
 from dataclasses import replace
 
+import numpy as np
 import pytest
 
 from remnantstats.occurrence.settings import NO_BASIS
 from remnantstats.report import AssumptionRow, collect_assumptions, write_report
-from remnantstats.report.narrative import answer
-from remnantstats.report.numbers import measure, row_measure
+from remnantstats.report.narrative import answer, models_compared
+from remnantstats.report.numbers import measure, number, row_measure, typeset
 
 #: as in the fixtures
 HOSTILE = "<script>alert('x')</script>\"$\\frac&"
@@ -42,7 +43,7 @@ def test_every_assumption_is_shown_with_its_basis(page, contents):
     rows = collect_assumptions(contents)
     text = plain(page)
     for row in rows:
-        for part in (row.name, row.description, row.basis):
+        for part in (row.name, typeset(row.description), typeset(row.basis)):
             assert " ".join(part.split()) in text
     by_name = {row.name: row.basis for row in rows}
     assert by_name["delivery"] == NO_BASIS
@@ -123,7 +124,7 @@ def test_checks_say_their_verdict_in_words(page, contents):
     text = plain(page)
     words = {"pass": "✓ passed", "warn": "! take note", "fail": "✗ failed"}
     for check in contents.fit.checks:
-        assert words[check.verdict] in text and check.message in text
+        assert words[check.verdict] in text and typeset(check.message) in text
 
 
 @pytest.mark.parametrize(("source", "said"), [("dust_contents", "dusty fraction"), ("grouped_contents", "new group")])
@@ -136,12 +137,62 @@ def test_other_studies_have_their_page(request, tmp_path, source, said):
         assert "this is where the inference ends" in text and "Rocky-system fraction" not in text
 
 
+def test_models_compared(compared_contents, tmp_path):
+    page = write_report(compared_contents, tmp_path).read_text(encoding="utf-8")
+    text = plain(page)
+    table, weights = compared_contents.comparison.table, compared_contents.comparison.weights
+    best, second, stacked = table.itertuples()
+    assert f"'{best.model}' predicts the sample best." in text
+    assert f"'{second.model}' is behind by {number(-second.elpd_difference, 1)} ± {number(second.difference_se, 1)}" in text
+    for name, weight in weights.items():
+        assert f"'{name}' {number(weight)}" in text
+    for row in (best, second, stacked):
+        assert row_measure(row) in text
+    assert "come from 'steady', the model that the study names first" in text
+    assert 'href="#models"' in page and page.index('id="figures"') < page.index('id="models"') < page.index('id="numbers"')
+    assert (tmp_path / "figures" / "models.png").is_file() and (tmp_path / "figures" / "models.pdf").is_file()
+    numbers = [int(item) for item in re.findall(r"<strong>Figure (\d+)\.", page)]
+    assert numbers == list(range(1, len(numbers) + 1))
+    assert "Yao, Vehtari" in text
+
+
+def test_stacked_results_are_said_to_be_stacked(compared_contents, tmp_path):
+    text = plain(write_report(replace(compared_contents, stacked=True), tmp_path).read_text(encoding="utf-8"))
+    assert "The occurrence prior and all that follows from it come from the stacked fraction" in text
+
+
+def test_close_models_are_not_ranked(compared_contents):
+    comparison = compared_contents.comparison
+    for gap, error, said in (
+        (-3.0, 0.5, "too small to tell the two apart"),
+        (-9.0, 6.0, "do not tell the two apart"),
+        (-90.0, 6.0, "prefer the first"),
+    ):
+        table = comparison.table.copy()
+        table.loc[1, ["elpd_difference", "difference_se"]] = gap, error
+        table.loc[1, "stars_above_k"] = 3
+        found = models_compared(replace(compared_contents, comparison=replace(comparison, table=table)))
+        assert said in found[1]
+        assert "provisional" in found[-1] and "3 stars" in found[-1]
+
+
+def test_one_model_alone_has_no_section(page):
+    assert 'id="models"' not in page and "#models" not in page and "Models compared" not in page
+
+
+def test_negative_numbers_have_minus_signs(page, contents):
+    assert typeset("normal, mean -2.5, at (-0.1) and 1e-05, x=-.5") == "normal, mean −2.5, at (−0.1) and 1e−05, x=−.5"
+    for kept in ("left-1", "2020-01-05", "Student-t", "Beta(1, 1)-like", "run-2", "a - 1", "0.2-0.4"):
+        assert typeset(kept) == kept
+    assert not np.any([re.search(r"(?:mean|= )-\d", part) for part in plain(page).split(";")])
+
+
 def test_the_page_is_quick_to_make_and_the_same_each_time(contents, tmp_path):
     start = time.process_time()
     first = write_report(contents, tmp_path / "a").read_bytes()
     spent = time.process_time() - start
     assert first == write_report(contents, tmp_path / "b").read_bytes()
-    assert spent < 8  # about 2.5 s; other work on the same machine slows it
+    assert spent < 6  # about 2 s; other work on the same machine slows it
 
 
 def test_importing_the_package_loads_no_matplotlib():

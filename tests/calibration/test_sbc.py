@@ -1,0 +1,87 @@
+"""Simulation-based calibration (Talts et al. 2018, arXiv:1804.06788): ranks of the truth are uniform."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pandas as pd
+import pytest
+import scipy.stats
+
+from remnantstats.calibration import CalibrationReport, calibrate, sbc
+from remnantstats.population import load_model, model_names
+
+
+def agrees(report, share=0.95):
+    """Uniform ranks and honest intervals for every parameter; refused surveys are few."""
+    assert report.surveys - report.refused >= share * report.surveys
+    table = report.coverage()
+    assert len(table) >= 2
+    # a family of tests: the bound is shared among the parameters
+    assert (table["uniform_p"] > 0.001 / len(table)).all(), report
+    for level in (50, 68, 90, 95):
+        assert (abs(table[f"covered_{level}"] - level / 100) <= 4 * table[f"error_{level}"]).all(), report
+
+
+def test_sixty_surveys_of_the_steady_model():
+    report = calibrate(load_model("steady"), surveys=60, stars=300, seed=2)
+    agrees(report)
+    table = report.coverage()
+    assert (table["uniform_p"] > 0.001).all()
+    assert set(table["quantity"]) == {"debris_fraction", "mean_log_accretion", "sd_log_accretion"}
+
+
+@pytest.mark.parametrize("name", [name for name in model_names() if name != "steady"])
+def test_thirty_surveys_of_each_other_model(name):
+    agrees(calibrate(load_model(name), surveys=30, stars=150, seed=3), share=0.8)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("name", model_names())
+def test_hundreds_of_surveys(name):
+    agrees(calibrate(load_model(name), surveys=500 if name == "steady" else 300, stars=300, seed=4), share=0.8)
+
+
+def test_a_likelihood_that_ignores_limits_is_caught(monkeypatch):
+    """Surveys read as if every star had been observed to the deepest limit: the fraction comes out too low."""
+    pose = sbc.pose
+
+    def blind_to_depth(model, sample, *rest):
+        table = sample.table.assign(log_accretion_limit=5.0)
+        return pose(model, replace(sample, table=table), *rest)
+
+    monkeypatch.setattr(sbc, "pose", blind_to_depth)
+    table = calibrate(load_model("steady"), surveys=60, stars=300, seed=2).coverage().set_index("quantity")
+    assert table.loc["debris_fraction", "uniform_p"] < 1e-4
+    assert table.loc["debris_fraction", "covered_90"] < 0.9 - 4 * table.loc["debris_fraction", "error_90"]
+
+
+def test_coverage_of_known_ranks():
+    even = (np.arange(100) + 0.5) / 100
+    narrow = 0.5 + (even - 0.5) / 4
+    frame = pd.concat(
+        [
+            pd.DataFrame({"survey": range(100), "quantity": name, "truth": 0.0, "mean": 0.5, "sd": 2.0, "rank": rank})
+            for name, rank in (("even", even), ("narrow", narrow))
+        ]
+    )
+    table = CalibrationReport(frame, 0, 100, 10, "none").coverage().set_index("quantity")
+    for level in (50, 68, 90, 95):
+        assert table.loc["even", f"covered_{level}"] == pytest.approx(level / 100, abs=0.011)
+        assert table.loc["narrow", f"covered_{level}"] == 1.0
+        assert table.loc["even", f"error_{level}"] == pytest.approx(scipy.stats.bernoulli(level / 100).std() / 10)
+    assert table.loc["even", "uniform_p"] > 0.99 and table.loc["narrow", "uniform_p"] < 1e-6
+    assert table.loc["even", "bias_sd"] == pytest.approx(0.25)
+
+
+def test_same_seed_same_ranks():
+    one, two, other = (calibrate(load_model("steady"), surveys=3, stars=100, seed=seed).ranks for seed in (1, 1, 2))
+    pd.testing.assert_frame_equal(one, two)
+    assert not np.array_equal(one["truth"], other["truth"])
+
+
+def test_truth_can_be_held():
+    report = calibrate(load_model("steady"), surveys=4, stars=100, seed=1, truth={"debris_fraction": 0.3})
+    held = report.ranks[report.ranks["quantity"] == "debris_fraction"]
+    assert (held["truth"] == 0.3).all() and len(held) == 4 - report.refused
