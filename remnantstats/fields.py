@@ -126,8 +126,13 @@ def _fault(item: Any, model: type[BaseModel], where: str, prefix: str) -> Fault:
     if item["type"] == "extra_forbidden":
         known = _known_keys(model, location[:-1])
         hint = nearest(location[-1], known) if known else "remove it"
+        allowed = ", ".join(known) if known else ""
         return Fault(
-            f"unknown key '{location[-1]}'", where=place, found=_short(item["input"]), remedy=f"{hint} (or remove it)"
+            f"unknown key '{location[-1]}'",
+            where=place,
+            found=_short(item["input"]),
+            allowed=allowed,
+            remedy=f"{hint} (or remove it)",
         )
     if item["type"] == "missing":
         return Fault(f"required key '{location[-1]}' is missing", where=place, remedy=f"add '{key}'")

@@ -209,7 +209,7 @@ def load_study(path: str | Path) -> Study:
                 remedy="choose another name",
             )
         )
-    loaded = [load_model(name, path.parent) for name in file.model.names]
+    loaded = [load_model(name, path.parent, f"{where}, key 'model.name'") for name in file.model.names]
     models = _with_overrides(loaded, file.model.priors, where)
     transfer = None if file.transfer is None else parse_transfer(file.transfer, where, path.parent)
     mission = None if file.mission is None else parse_mission(file.mission, where, path.parent)
@@ -218,6 +218,7 @@ def load_study(path: str | Path) -> Study:
             Fault(
                 "a mission is sized from an occurrence prior, and the study makes none",
                 where=f"{where}, table [mission]",
+                found="no table [transfer]",
                 allowed="[mission] together with [transfer]",
                 remedy="add [transfer], or size from an exported prior with `remnantstats size`",
             )

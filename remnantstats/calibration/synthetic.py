@@ -145,7 +145,13 @@ def draw_truth(problem: Problem, rng: np.random.Generator, given: Mapping[str, f
     for name, value in given.items():
         if name not in known:
             raise ModelError(
-                Fault(f"the model has no parameter '{name}'", where="the truth", remedy=nearest(name, known))
+                Fault(
+                    f"the model has no parameter '{name}'",
+                    where="the truth",
+                    found=name,
+                    allowed=", ".join(known),
+                    remedy=nearest(name, known),
+                )
             )
         low, high = problem.parameter(name).limits
         if not (isinstance(value, int | float) and low <= value <= high):

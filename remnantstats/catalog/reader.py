@@ -218,7 +218,8 @@ def _read(path: Path, name: str) -> RawTable:
     if notation in ("csv", "ecsv"):
         return _text_table(read_csv(content, name) if notation == "csv" else read_ecsv(content, name), name, digest)
     if not content.strip():
-        raise InputError(Fault("the table is empty", where=name, found=f"{len(content)} bytes", remedy="check it"))
+        found, allowed = f"{len(content)} bytes", "a table with at least one row"
+        raise InputError(Fault("the table is empty", where=name, found=found, allowed=allowed, remedy="check it"))
     if notation == "parquet":
         cells, units = binary_tables.read_parquet(path, name)
     else:

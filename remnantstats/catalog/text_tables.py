@@ -179,7 +179,13 @@ def _decode(content: bytes, file: str) -> str:
     """Return the text of a file, or say where it is not text."""
     if not content.strip():
         raise InputError(
-            Fault("the table is empty", where=file, found=f"{len(content)} bytes", remedy="check the file")
+            Fault(
+                "the table is empty",
+                where=file,
+                found=f"{len(content)} bytes",
+                allowed="a table with at least one row",
+                remedy="check the file",
+            )
         )
     nul = content.find(b"\0")
     if nul >= 0:

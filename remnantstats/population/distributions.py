@@ -279,6 +279,7 @@ def parse_distribution(data: Any, where: str, key: str) -> Any:
             Fault(
                 f"unknown distribution family {family!r}",
                 where=place,
+                found=f"family = {family!r}",
                 allowed=", ".join(sorted(_FAMILIES)),
                 remedy=nearest(str(family), list(_FAMILIES)),
             )

@@ -109,6 +109,8 @@ class PopulationModel:
                     Fault(
                         f"the model '{self.name}' has no parameter '{name}'",
                         where=f"{where}, key '{key}'",
+                        found=name,
+                        allowed=", ".join(self.priors),
                         remedy=nearest(name, list(self.priors)),
                     )
                     for name in unknown
@@ -145,7 +147,7 @@ def model_names() -> list[str]:
     return sorted(path.stem for path in _folder().glob("*.toml"))
 
 
-def load_model(name: str | Path, folder: Path | None = None) -> PopulationModel:
+def load_model(name: str | Path, folder: Path | None = None, where: str = "") -> PopulationModel:
     """Read a population model.
 
     Parameters
@@ -154,6 +156,8 @@ def load_model(name: str | Path, folder: Path | None = None) -> PopulationModel:
         Name of a shipped model, or a path to a model file.
     folder : pathlib.Path, optional
         Folder to which a relative path is relative; default the working directory.
+    where : str, optional
+        File and key that name the model, for messages.
 
     Returns
     -------
@@ -173,7 +177,8 @@ def load_model(name: str | Path, folder: Path | None = None) -> PopulationModel:
         raise ModelError(
             Fault(
                 f"there is no population model '{text}'",
-                where=str(_folder().name),
+                where=where or "name of the model",
+                found=text,
                 allowed=", ".join(model_names()) + ", or a path to a model file",
                 remedy=nearest(text, model_names()),
             )

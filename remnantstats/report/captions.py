@@ -278,8 +278,8 @@ def prior_predictive(fit: Fit, channel: str, shares: npt.NDArray[np.float64]) ->
     below, within = float((shares < raw.value).mean()), float((shares <= raw.value).mean())
     caption = (
         f"Share of the blind stars that {len(shares)} surveys of this design would detect, each with parameters from "
-        f"the prior, before any star is looked at: median {number(middle)}, 90 % of them {number(low)} to {number(high)}. "
-        f"Dotted: this survey, {number(raw.value)}, "
+        f"the prior, before any star is looked at: median {number(middle)}, 90 % of them {number(low)} to "
+        f"{number(high)}. Dotted: this survey, {number(raw.value)}, "
     )
     if within == 0 or below == 1:
         caption += "outside all of them: the prior did not expect it."

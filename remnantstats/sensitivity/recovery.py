@@ -100,7 +100,15 @@ def read_recovery(path: Path, value: str) -> RecoveryTable:
         efficiency that falls with rate; with the rows named.
     """
     if not path.is_file():
-        raise InputError(Fault("the efficiency table does not exist", where=str(path), remedy="check efficiency_table"))
+        raise InputError(
+            Fault(
+                "the efficiency table does not exist",
+                where=str(path),
+                found="no such file",
+                allowed="a CSV file; the path is relative to the study file",
+                remedy="check efficiency_table",
+            )
+        )
     try:
         frame = pd.read_csv(path, dtype=str, keep_default_na=False, encoding="utf-8-sig")
     except (ValueError, UnicodeDecodeError, OSError) as error:

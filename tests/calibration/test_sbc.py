@@ -32,7 +32,14 @@ def test_sixty_surveys_of_the_steady_model():
     assert set(table["quantity"]) == {"debris_fraction", "mean_log_accretion", "sd_log_accretion"}
 
 
-@pytest.mark.parametrize("name", [name for name in model_names() if name != "steady"])
+#: models whose thirty surveys take half a minute and less
+FAST = ("cooling-trend", "grouped", "progenitor-trend")
+OTHERS = [
+    pytest.param(name, marks=[] if name in FAST else pytest.mark.slow) for name in model_names() if name != "steady"
+]
+
+
+@pytest.mark.parametrize("name", OTHERS)
 def test_thirty_surveys_of_each_other_model(name):
     agrees(calibrate(load_model(name), surveys=30, stars=150, seed=3), share=0.8)
 

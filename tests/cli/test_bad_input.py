@@ -84,7 +84,8 @@ STUDIES = [
     Bad("wrong type", ("study.toml", "seed"), text=study_text().replace("seed = 5", 'seed = "five"')),
     Bad("number for a list", ("study.toml", "log_accretion"), text=study_text(more="[thresholds]\nlog_accretion = 7")),
     Bad("absent table", ("none.csv",), text=study_text(table="none.csv")),
-    Bad("absent model", ("stedy", "steady"), text=study_text(model='name = "stedy"')),
+    Bad("absent model", ("study.toml, key 'model.name'", "stedy", "did you mean 'steady'?"),
+        text=study_text(model='name = "stedy"')),
     Bad("path that is no model", ("sample.csv",), text=study_text(model='name = "sample.csv"')),
     Bad("path to TOML that is no model", ("other.toml",), text=study_text(model='name = "other.toml"'),
         files=(("other.toml", "colour = 3\n"),)),
@@ -130,8 +131,9 @@ def check_refusal(code: int, stdout: str, stderr: str, words: tuple[str, ...], o
     assert "Traceback" not in message + stdout
     for word in words:
         assert word in message, f"{word!r} is not in:\n{message}"
-    assert "where:" in message, message
-    assert "to do:" in message or "allowed:" in message, message
+    # place, value found, what is allowed, remedy
+    for part in ("where:", "found:", "allowed:", "to do:"):
+        assert part in message, f"{part} is not in:\n{message}"
     assert not out.exists(), f"output was written: {sorted(out.rglob('*'))}"
 
 

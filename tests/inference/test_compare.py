@@ -55,7 +55,8 @@ def test_scores_are_those_of_arviz(fits, comparison):
         own = arviz_stats.loo(fit.posterior, pointwise=True)
         row = rows.loc[fit.model.name]
         assert row["elpd"] == pytest.approx(float(own.elpd), rel=1e-9)
-        assert row["elpd_se"] == pytest.approx(float(own.se), rel=1e-3)
+        # one of the two library stacks divides by n − 1
+        assert row["elpd_se"] == pytest.approx(float(own.se), rel=1 / len(fit.stars))
         assert row["p_loo"] == pytest.approx(float(own.p), rel=1e-6)
         assert row["worst_k"] == pytest.approx(float(np.max(own.pareto_k)))
         pointwise[fit.model.name] = np.asarray(own.elpd_i)

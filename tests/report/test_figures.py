@@ -106,7 +106,8 @@ def test_the_companion_is_drawn_from_the_deepest_limit_up(request, source):
     steps = companion(fit, channel)
     line = next(item for item in ax.lines if item.get_label().startswith("Kaplan–Meier"))
     assert line.get_drawstyle() == "steps-post" and line.get_linewidth() < 1
-    assert list(line.get_xdata()[:-1]) == list(steps["value"]) and list(line.get_ydata()[:-1]) == list(steps["fraction"])
+    assert list(line.get_xdata()[:-1]) == list(steps["value"])
+    assert list(line.get_ydata()[:-1]) == list(steps["fraction"])
     stars = fit.stars[(fit.stars["inclusion"] == "blind") & (fit.stars[channel] == "limit")]
     own = fit.problem.rows.channels[channel].limit[stars.index]
     assert line.get_xdata()[0] == pytest.approx(own.min())
@@ -152,7 +153,8 @@ def test_models_are_told_apart_by_line_and_colour(compared_contents):
     assert list(points.get_xdata()) == list(rows["threshold"]) and list(points.get_ydata()) == list(rows["q50"])
     first = curves[0]
     at_seven = np.interp(7.0, first.get_xdata(), first.get_ydata())
-    assert at_seven == pytest.approx(above_rows(comparison, "pollution", "steady").set_index("threshold")["q50"][7], abs=0.01)
+    steady = above_rows(comparison, "pollution", "steady").set_index("threshold")["q50"]
+    assert at_seven == pytest.approx(steady[7], abs=0.01)
 
 
 def test_needed_numbers_are_marked_and_the_unreachable_said(contents):

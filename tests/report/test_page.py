@@ -7,7 +7,6 @@ import sys
 import time
 from dataclasses import replace
 
-import numpy as np
 import pytest
 
 from remnantstats.occurrence.settings import NO_BASIS
@@ -143,13 +142,15 @@ def test_models_compared(compared_contents, tmp_path):
     table, weights = compared_contents.comparison.table, compared_contents.comparison.weights
     best, second, stacked = table.itertuples()
     assert f"'{best.model}' predicts the sample best." in text
-    assert f"'{second.model}' is behind by {number(-second.elpd_difference, 1)} ± {number(second.difference_se, 1)}" in text
+    gap, error = number(-second.elpd_difference, 1), number(second.difference_se, 1)
+    assert f"'{second.model}' is behind by {gap} ± {error}" in text
     for name, weight in weights.items():
         assert f"'{name}' {number(weight)}" in text
     for row in (best, second, stacked):
         assert row_measure(row) in text
     assert "come from 'steady', the model that the study names first" in text
-    assert 'href="#models"' in page and page.index('id="figures"') < page.index('id="models"') < page.index('id="numbers"')
+    assert 'href="#models"' in page
+    assert page.index('id="figures"') < page.index('id="models"') < page.index('id="numbers"')
     assert (tmp_path / "figures" / "models.png").is_file() and (tmp_path / "figures" / "models.pdf").is_file()
     numbers = [int(item) for item in re.findall(r"<strong>Figure (\d+)\.", page)]
     assert numbers == list(range(1, len(numbers) + 1))
@@ -180,11 +181,11 @@ def test_one_model_alone_has_no_section(page):
     assert 'id="models"' not in page and "#models" not in page and "Models compared" not in page
 
 
-def test_negative_numbers_have_minus_signs(page, contents):
+def test_negative_numbers_have_minus_signs(page):
     assert typeset("normal, mean -2.5, at (-0.1) and 1e-05, x=-.5") == "normal, mean −2.5, at (−0.1) and 1e−05, x=−.5"
     for kept in ("left-1", "2020-01-05", "Student-t", "Beta(1, 1)-like", "run-2", "a - 1", "0.2-0.4"):
         assert typeset(kept) == kept
-    assert not np.any([re.search(r"(?:mean|= )-\d", part) for part in plain(page).split(";")])
+    assert re.search(r"(mean |= |\()-\d", plain(page)) is None
 
 
 def test_the_page_is_quick_to_make_and_the_same_each_time(contents, tmp_path):

@@ -175,8 +175,9 @@ def test_stars_are_the_followup_list(done):
     assert (stars.loc[seen, "debris_probability"] == 1).all()
     # a star in which nothing was seen is less likely a host than any star; the deeper its limit, the less
     unseen = stars[~seen].sort_values("log_accretion_limit_50")
-    f = done.summary.set_index("quantity").loc["debris_fraction", "mean"]
-    assert unseen["debris_probability"].between(0, f).all()
+    f = done.summary.set_index("quantity").loc["debris_fraction"]
+    # the table averages over 200 of the draws
+    assert unseen["debris_probability"].between(0, f["mean"] + 4 * f["sd"] / 200**0.5).all()
     assert unseen["debris_probability"].is_monotonic_increasing
 
 
