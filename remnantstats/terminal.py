@@ -101,8 +101,8 @@ def _headline(fit: Fit) -> str:
     seen, observed = int((listed == "detected").sum()), int((listed != "unobserved").sum())
     word = "dust" if fit.fraction == "dusty_fraction" else "debris"
     return (
-        f"{seen} of {observed} blind observed stars are listed as detected; corrected for each star's own limit, the fraction "
-        f"with {word} is {row.q50:.3f} (68 %: {row.q16:.3f} to {row.q84:.3f})."
+        f"{seen} of {observed} blind observed stars are listed as detected; corrected for each star's own limit, the "
+        f"fraction with {word} is {row.q50:.3f} (68 %: {row.q16:.3f} to {row.q84:.3f})."
     )
 
 

@@ -11,8 +11,8 @@ import numpy.typing as npt
 import pandas as pd
 
 __all__ = [
-    "Check",
     "LIMITS",
+    "Check",
     "convergence_checks",
     "engine_check",
     "extrapolation_check",
@@ -206,7 +206,9 @@ def influence_check(pareto_k: FloatArray, stars: Sequence[str]) -> Check:
     """Check of single stars' influence, by leave-one-out Pareto k̂."""
     high = np.flatnonzero(pareto_k > LIMITS.pareto_k)
     named = ", ".join(stars[i] for i in high[np.argsort(-pareto_k[high])][:5])
-    text = f"{high.size} stars move the posterior much: {named}" if high.size else "no single star moves the posterior much"
+    text = f"{high.size} stars move the posterior much: {named}"
+    if not high.size:
+        text = "no single star moves the posterior much"
     worst = float(np.max(pareto_k)) if pareto_k.size else 0.0
     return Check(
         "no star decides alone", _judge(not high.size, "warn"), worst,

@@ -31,8 +31,8 @@ def fraction_above_steps(problem: Problem, channel: str) -> pd.DataFrame:
     Returns
     -------
     pandas.DataFrame
-        Columns `value` (log10), `fraction`, `low`, `high` (95 % pointwise interval); blind observed stars alone. Between
-        two rows the fraction is that of the lower one. Below the deepest limit it is not determined.
+        Columns `value` (log10), `fraction`, `low`, `high` (95 % pointwise interval); blind observed stars alone.
+        Between two rows the fraction is that of the lower one. Below the deepest limit it is not determined.
 
     Notes
     -----

@@ -134,7 +134,8 @@ def _mixture(draws: Sequence[FloatArray], weights: FloatArray, rng: np.random.Ge
 
 def _points(draws: FloatArray) -> dict[str, float]:
     points = np.quantile(draws, [0.05, 0.1587, 0.5, 0.8413, 0.95])
-    return {"mean": float(draws.mean()), **dict(zip(("q05", "q16", "q50", "q84", "q95"), map(float, points), strict=True))}
+    names = ("q05", "q16", "q50", "q84", "q95")
+    return {"mean": float(draws.mean()), **dict(zip(names, map(float, points), strict=True))}
 
 
 def _above(fits: Sequence[Fit], weights: FloatArray, rng: np.random.Generator) -> pd.DataFrame:

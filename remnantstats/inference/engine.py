@@ -133,7 +133,7 @@ def fit_problem(
     tree = _tree(problem, draws, theta, design, log_likelihood, seed, thresholds, quick)
     found.append(prior_conflict_check(tree, [item.name for item in draws.quantities if not item.dim][:8]))
     clock.stage("stars")
-    stars = star_table(problem, design, theta, seed)
+    stars = star_table(problem, design, theta, seed, log_likelihood)
     completeness = completeness_table(problem, design)
     clock.stop()
     return Fit(
@@ -273,7 +273,9 @@ def _summary(quantities: Sequence[Quantity], shape: tuple[int, int]) -> pd.DataF
                     "sd": float(np.std(values)) if np.ptp(values) > 0 else 0.0,
                     **dict(zip(("q05", "q16", "q50", "q84", "q95"), map(float, points), strict=True)),
                     "ess_bulk": float(array_stats.ess(chains, chain_axis=0, draw_axis=1)) if moves else np.nan,
-                    "ess_tail": float(array_stats.ess(chains, chain_axis=0, draw_axis=1, method="tail", prob=(0.05, 0.95)))
+                    "ess_tail": float(
+                        array_stats.ess(chains, chain_axis=0, draw_axis=1, method="tail", prob=(0.05, 0.95))
+                    )
                     if moves
                     else np.nan,
                     "r_hat": float(array_stats.rhat(chains, chain_axis=0, draw_axis=1)) if moves else np.nan,
@@ -283,7 +285,8 @@ def _summary(quantities: Sequence[Quantity], shape: tuple[int, int]) -> pd.DataF
 
 
 def _data_checks(problem: Problem, draws: _Draws, log_likelihood: FloatArray) -> list[Check]:
-    share = float(next(item.values for item in draws.quantities if item.name == "extrapolated_share").mean())
+    extrapolated = next(item for item in draws.quantities if item.name == "extrapolated_share")
+    share = float(np.mean(extrapolated.entries[0][1]))
     stars = problem.sample.table["star"].to_numpy(dtype=str)
     found = [judge.influence_check(star_influence(log_likelihood), list(stars))]
     if np.isfinite(share):
@@ -301,8 +304,8 @@ def _limits_check(problem: Problem) -> Check:
         "warn" if lacking else "pass",
         float(lacking),
         "a limit for every observed star",
-        f"{lacking} detected stars have no limit; completeness, depth bins and predictive checks take theirs from blind "
-        "stars of the same survey and atmosphere"
+        f"{lacking} detected stars have no limit; completeness, depth bins and predictive checks take theirs from "
+        "blind stars of the same survey and atmosphere"
         if lacking
         else "every observed star has its limit",
     )
@@ -313,8 +316,8 @@ def _notes(problem: Problem, design: SurveyDesign) -> tuple[str, ...]:
     for name, item in design.limits.items():
         if item.imputed.any():
             notes.append(
-                f"{int(item.imputed.sum())} limits of the {name} channel were taken from blind stars of the same survey "
-                f"and atmosphere"
+                f"{int(item.imputed.sum())} limits of the {name} channel were taken from blind stars of the same "
+                f"survey and atmosphere"
                 + (f" ({item.borrowed} of them from other surveys, for want of any)" if item.borrowed else "")
             )
     return tuple(notes)

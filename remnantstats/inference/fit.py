@@ -124,7 +124,7 @@ class Fit:
         if not label:
             return np.asarray(values).reshape(-1)
         dim = values.dims[-1]
-        labels = [item if isinstance(item, str) else f"{float(item):g}" for item in values[dim].values.tolist()]
+        labels = [item if isinstance(item, str) else f"{float(item):g}" for item in values[dim].to_numpy().tolist()]
         return np.asarray(values.isel({dim: labels.index(label[:-1])})).reshape(-1)
 
     def summary(self) -> pd.DataFrame:

@@ -80,5 +80,7 @@ def prior_conflict_check(tree: Any, quantities: Sequence[str]) -> Check:
         if float(row["prior"]) > _SENSITIVE and float(row["likelihood"]) > _SENSITIVE
     ]
     worst = float(table["prior"].astype(float).max()) if len(table) else 0.0
-    text = "prior and data may be in conflict for " + ", ".join(conflict) if conflict else "no conflict of prior and data"
+    text = "no conflict of prior and data"
+    if conflict:
+        text = "prior and data may be in conflict for " + ", ".join(conflict)
     return Check("prior and data agree", "warn" if conflict else "pass", worst, allowed, text)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Mapping
 from dataclasses import dataclass
 
@@ -147,7 +148,7 @@ def _bins(problem: Problem, design: SurveyDesign) -> list[dict[str, object]]:
             continue
         edges = np.unique(np.quantile(finite, [0, 0.25, 0.5, 0.75, 1]))
         edges = np.array([edges[0] - 0.01, edges[0] + 0.01]) if len(edges) == 1 else edges
-        for low, high in zip(edges[:-1], edges[1:], strict=True):
+        for low, high in itertools.pairwise(edges):
             last = high == edges[-1]
             inside = (limit >= low) & ((limit <= high) if last else (limit < high))
             bins.append({"channel": name, "kind": "depth", "low": low, "high": high, "mask": inside})
@@ -166,7 +167,7 @@ def _value_bins(problem: Problem, name: str) -> list[dict[str, object]]:
     edges = np.array([-np.inf, *inner, np.inf])
     return [
         {"channel": name, "kind": "value", "low": low, "high": high}
-        for low, high in zip(edges[:-1], edges[1:], strict=True)
+        for low, high in itertools.pairwise(edges)
     ]
 
 def _count(bins: list[dict[str, object]], outcomes: Mapping[str, ChannelOutcome]) -> FloatArray:

@@ -85,5 +85,6 @@ def _describe(problem: Problem, acting: list[str], at: Mapping[str, float]) -> s
     where = (" at " + ", ".join(parts)) if parts else ""
     group = " in a group not yet seen" if problem.groups else ""
     atmosphere = " of stars with hydrogen atmospheres" if "fraction_offset[He]" in problem.model.priors else ""
-    dust = "; delivery must then include the share of debris hosts with warm dust" if problem.channels == ("excess",) else ""
+    dust = "; delivery must then include the share of debris hosts with warm dust"
+    dust = dust if problem.channels == ("excess",) else ""
     return f"{what}{atmosphere}{where}{group}; delivery must refer to the same stars{dust}"

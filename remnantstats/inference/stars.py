@@ -27,7 +27,9 @@ _DRAWS = 200
 _PROBE = 1e4
 
 
-def debris_probability(problem: Problem, theta: Mapping[str, FloatArray]) -> FloatArray:
+def debris_probability(
+    problem: Problem, theta: Mapping[str, FloatArray], log_likelihood: FloatArray | None = None
+) -> FloatArray:
     """Probability that each star hosts debris, given its own data and the sample.
 
     Parameters
@@ -35,6 +37,8 @@ def debris_probability(problem: Problem, theta: Mapping[str, FloatArray]) -> Flo
     problem : Problem
     theta : mapping
         S posterior draws.
+    log_likelihood : ndarray, shape (S, n), optional
+        Of the same draws, where it is at hand.
 
     Returns
     -------
@@ -43,7 +47,7 @@ def debris_probability(problem: Problem, theta: Mapping[str, FloatArray]) -> Flo
         the star's covariates, for stars unobserved in every channel.
     """
     size = max(np.shape(value)[0] for value in theta.values() if np.ndim(value))
-    log_likelihood = problem.pointwise(theta)
+    log_likelihood = problem.pointwise(theta) if log_likelihood is None else log_likelihood
     log_no = _log_without_debris(problem, theta, size)
     channels = problem.rows.channels.values()
     listing = np.zeros(len(problem.rows))
@@ -74,7 +78,13 @@ def _log_without_debris(problem: Problem, theta: Mapping[str, FloatArray], size:
     return result
 
 
-def star_table(problem: Problem, design: SurveyDesign, theta: Mapping[str, FloatArray], seed: int) -> pd.DataFrame:
+def star_table(
+    problem: Problem,
+    design: SurveyDesign,
+    theta: Mapping[str, FloatArray],
+    seed: int,
+    log_likelihood: FloatArray | None = None,
+) -> pd.DataFrame:
     """Table of stars, most informative columns first.
 
     Parameters
@@ -84,6 +94,8 @@ def star_table(problem: Problem, design: SurveyDesign, theta: Mapping[str, Float
     theta : mapping
         Posterior draws.
     seed : int
+    log_likelihood : ndarray, shape (S, n), optional
+        Of the same draws, where it is at hand.
 
     Returns
     -------
@@ -97,7 +109,7 @@ def star_table(problem: Problem, design: SurveyDesign, theta: Mapping[str, Float
     some = {key: value[index] if np.ndim(value) else value for key, value in theta.items()}
     table = problem.sample.table
     result = table[["star", "survey", "inclusion", "atmosphere"]].copy()
-    result["debris_probability"] = debris_probability(problem, some)
+    result["debris_probability"] = debris_probability(problem, theta, log_likelihood)
     for name in problem.channels:
         names, limits = CHANNELS[name], design.limits[name]
         result[f"{name}"] = table[name]

@@ -138,7 +138,8 @@ def write_mission(size: MissionSize, folder: Path, marks: Sequence[str] = ()) ->
     """
     marked = list(dict.fromkeys((*size.marks, *marks)))
     as_csv, as_json = folder / "mission.csv", folder / "mission.json"
-    write_text(as_csv, (size.table.assign(mark="; ".join(marked)) if marked else size.table).to_csv(index=False, lineterminator="\n"))
+    table = size.table.assign(mark="; ".join(marked)) if marked else size.table
+    write_text(as_csv, table.to_csv(index=False, lineterminator="\n"))
     content = {
         "schema_version": SCHEMA_VERSION,
         "kind": "mission_size",

@@ -59,9 +59,8 @@ def covariate_values(sample: Sample, name: str) -> tuple[FloatArray, FloatArray]
             )
         )
     value = table[column].to_numpy(dtype=float)
-    error = (
-        table[f"{column}_err"].to_numpy(dtype=float) if f"{column}_err" in table.columns else np.full(len(table), np.nan)
-    )
+    given = f"{column}_err" in table.columns
+    error = table[f"{column}_err"].to_numpy(dtype=float) if given else np.full(len(table), np.nan)
     bad = np.flatnonzero(~np.isfinite(value) | (value <= 0 if log else False))
     if bad.size:
         raise ModelError(

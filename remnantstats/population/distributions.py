@@ -287,7 +287,8 @@ def parse_distribution(data: Any, where: str, key: str) -> Any:
     try:
         return _ADAPTER.validate_python(dict(data))
     except ValidationError as error:
-        raise InputError(*[_fault(item, _FAMILIES[family], place) for item in error.errors(include_url=False)]) from error
+        faults = [_fault(item, _FAMILIES[family], place) for item in error.errors(include_url=False)]
+        raise InputError(*faults) from error
 
 
 def _fault(item: Any, kind: type[_Family], place: str) -> Fault:
@@ -371,4 +372,5 @@ def describe(distribution: Any) -> str:
         "student_t": "Student-t, {df:g} degrees of freedom, mean {mean_:g}, scale {sd:g}",
         "draws": "draws from {file}",
     }
-    return names[distribution.family].format(**{name: getattr(distribution, name) for name in type(distribution).model_fields})
+    values = {name: getattr(distribution, name) for name in type(distribution).model_fields}
+    return names[distribution.family].format(**values)

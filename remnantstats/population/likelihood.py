@@ -209,7 +209,7 @@ def _integral(
 
 
 def _add_probe(ops: ArrayOps, values: dict[str, Value], probe: Probe) -> Array:
-    """Put a further measurement among the values; two of one channel become one, with the density of their difference."""
+    """Put a further measurement among the values; two of one channel become one, and the density of their gap."""
     own = values.get(probe.channel)
     if own is None:
         values[probe.channel] = probe.value

@@ -16,12 +16,12 @@ from ..errors import Fault, ModelError
 
 __all__ = [
     "BY_INVERSE",
+    "CORRELATION",
     "DEBRIS_FRACTION",
     "DUST_SHARE",
     "GROUP_RAW",
     "GROUP_SD",
     "ROW_DEVIATION",
-    "CORRELATION",
     "Parameter",
     "covariate_mean",
     "covariate_sd",

@@ -1,7 +1,7 @@
 """Limits of detected stars that the table does not give.
 
-The likelihood of a "measured" detection does not need its limit. Completeness, depth bins and predictive checks do; they
-take it from blind stars of the same survey and atmosphere, and say how many.
+The likelihood of a "measured" detection does not need its limit. Completeness, depth bins and predictive checks do;
+they take it from blind stars of the same survey and atmosphere, and say how many.
 """
 
 from __future__ import annotations

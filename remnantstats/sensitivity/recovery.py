@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
@@ -182,7 +183,7 @@ def _refuse_falling(table: RecoveryTable) -> None:
     for index, label in enumerate(table.labels):
         rows = np.flatnonzero(table.label == index)
         rows = rows[np.argsort(table.value[rows], kind="stable")]
-        for low, high in zip(rows[:-1], rows[1:], strict=True):
+        for low, high in itertools.pairwise(rows):
             counts = [[table.recovered[row], table.injected[row] - table.recovered[row]] for row in (low, high)]
             if table.value[high] > table.value[low] and _falls(counts):
                 name = f"{table.by} '{label}', " if label else ""

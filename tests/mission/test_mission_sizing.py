@@ -5,9 +5,9 @@ import json
 import numpy as np
 import pytest
 import scipy.stats
+from helpers.known_priors import beta_prior, known_prior, single_prior
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from helpers.known_priors import beta_prior, known_prior, single_prior
 from scipy.special import betaln
 
 from remnantstats.errors import InputError
