@@ -33,7 +33,7 @@ __all__ = ["RunResult", "infer_study", "read_study_sample", "run"]
 Progress = Callable[[str], None]
 
 #: libraries whose versions decide a result
-_LIBRARIES = ("numpy", "scipy", "pandas", "xarray", "pymc", "pytensor", "nutpie", "arviz-stats", "astropy")
+_LIBRARIES = ("numpy", "scipy", "pandas", "xarray", "pymc", "pytensor", "nutpie", "arviz-stats", "astropy", "lifelines")
 
 
 @dataclass(frozen=True, repr=False)

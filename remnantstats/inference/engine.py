@@ -131,7 +131,9 @@ def fit_problem(
     found = [*draws.checks, judge.predictive_verdict(predictive.p_value, predictive.replicates)]
     found += _data_checks(problem, draws, log_likelihood)
     tree = _tree(problem, draws, theta, design, log_likelihood, seed, thresholds, quick)
-    found.append(prior_conflict_check(tree, [item.name for item in draws.quantities if not item.dim][:8]))
+    if not quick:
+        # a first look leaves this out: it loads as much again as all the rest
+        found.append(prior_conflict_check(tree, [item.name for item in draws.quantities if not item.dim][:8]))
     clock.stage("stars")
     stars = star_table(problem, design, theta, seed, log_likelihood)
     completeness = completeness_table(problem, design)

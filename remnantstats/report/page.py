@@ -17,7 +17,7 @@ from .contents import ReportContents, collect_assumptions
 from .gallery import MODELS, Plate, gallery
 from .narrative import answer, chain, extrapolations, models_compared, notes, validity
 from .numbers import count, number, typeset
-from .style import save_figure
+from .rendering import save_plates
 from .tables import (
     Cell,
     Table,
@@ -80,7 +80,7 @@ def write_report(contents: ReportContents, folder: Path) -> Path:
     """
     make_folder(folder / "figures")
     plates = gallery(contents)
-    images = {plate.name: save_figure(plate.draw(), folder / "figures" / plate.name) for plate in plates}
+    images = save_plates(plates, folder / "figures")
     page = folder / "report.html"
     write_text(page, render_page(contents, plates, images))
     return page
