@@ -9,6 +9,8 @@ from collections.abc import Iterator
 from dataclasses import dataclass, field
 from typing import Any
 
+import yaml
+
 from remnantstats.errors import Fault, InputError
 
 __all__ = ["TextTable", "TornRow", "read_csv", "read_ecsv"]
@@ -110,8 +112,15 @@ def read_csv(content: bytes, file: str) -> TextTable:
     return _records(text, ",", file, 0)
 
 
+class _HeaderLoader(yaml.SafeLoader):  # type: ignore[misc]
+    """Plain values alone; objects that other writers describe in the header's metadata are passed over."""
+
+
+_HeaderLoader.add_multi_constructor("!", lambda _loader, _suffix, _node: None)
+
+
 def read_ecsv(content: bytes, file: str) -> TextTable:
-    """Read an ECSV file: its header by astropy, its rows as strictly as those of a CSV file.
+    """Read an ECSV file: its header as the YAML it is, its rows as strictly as those of a CSV file.
 
     Parameters
     ----------
@@ -161,13 +170,10 @@ def _ecsv_header(lines: list[str], file: str) -> dict[str, Any]:
                 remedy="let the name end in .csv if it is plain CSV",
             )
         )
-    # astropy is imported inside functions for start-up time alone
-    from astropy.table.meta import YamlParseError, get_header_from_yaml
-
     try:
-        header = get_header_from_yaml(lines[1:])
+        header = yaml.load("\n".join(lines[1:]), _HeaderLoader)  # a safe loader: it builds plain values alone
         [item["name"] for item in header.get("datatype", [])]
-    except (YamlParseError, ValueError, TypeError, KeyError, AttributeError) as error:
+    except (yaml.YAMLError, ValueError, TypeError, KeyError, AttributeError) as error:
         reason = " ".join(str(error).split())[:160]
         raise InputError(
             Fault("the ECSV header cannot be read", where=file, found=reason, remedy="write the file with a library")

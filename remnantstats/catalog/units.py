@@ -16,6 +16,8 @@ __all__ = ["same_unit", "to_our_unit"]
 
 Floats = npt.NDArray[np.float64]
 
+#: other spellings of our units, known without loading the units library
+_SPELLINGS = {"solMass": "Msun", "M_sun": "Msun"}
 _BARE = {"", "-", "--", "---", "1", "none", "dimensionless"}
 _LOGARITHM = re.compile(r"(?:dex|log10|log|lg)?\s*(?:\[(?P<square>.*)\]|\((?P<round>.*)\))", re.IGNORECASE)
 
@@ -45,7 +47,7 @@ def to_our_unit(values: Floats, column: Column, written: str, file: str) -> Floa
         Where the unit is unknown or measures something else.
     """
     text = written.strip()
-    if column.unit is None or text == column.unit or text.lower() in _BARE:
+    if column.unit is None or _SPELLINGS.get(text, text) == column.unit or text.lower() in _BARE:
         return values
     try:
         if column.unit.startswith("dex"):
