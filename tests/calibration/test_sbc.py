@@ -9,8 +9,11 @@ import pandas as pd
 import pytest
 import scipy.stats
 
-from remnantstats.calibration import CalibrationReport, calibrate, sbc
+from remnantstats.calibration import CalibrationReport, Design, calibrate, sbc
+from remnantstats.calibration.builtin import builtin_table
+from remnantstats.catalog import ChannelRules, RowRules, read_sample
 from remnantstats.population import load_model, model_names
+from remnantstats.sensitivity import ChannelSettings
 
 
 def agrees(report, share=0.95):
@@ -62,6 +65,22 @@ def test_a_likelihood_that_ignores_limits_is_caught(monkeypatch):
     table = calibrate(load_model("steady"), surveys=60, stars=300, seed=2).coverage().set_index("quantity")
     assert table.loc["debris_fraction", "uniform_p"] < 1e-4
     assert table.loc["debris_fraction", "covered_90"] < 0.9 - 4 * table.loc["debris_fraction", "error_90"]
+
+
+def test_one_selection_read_as_the_other_is_caught(monkeypatch):
+    """A given design with wide noise: honest as made, biased where the threshold is taken to act on the truth."""
+    settings = ChannelSettings(width=0.6)
+    rules = RowRules(pollution=ChannelRules(width=0.6))
+    sample = read_sample(builtin_table(np.random.default_rng(0), 300, False), rules=rules)
+    design = Design(sample, {"pollution": settings})
+    agrees(calibrate(load_model("steady"), surveys=60, stars=300, seed=2, design=design))
+    pose, other = sbc.pose, ChannelSettings(threshold_on="true", width=0.6)
+    monkeypatch.setattr(sbc, "pose", lambda model, sample, _, *rest: pose(model, sample, {"pollution": other}, *rest))
+    biased = calibrate(load_model("steady"), surveys=60, stars=300, seed=2, design=design)
+    uniform = biased.coverage().set_index("quantity")["uniform_p"]
+    assert uniform["debris_fraction"] < 1e-3 and uniform["mean_log_accretion"] < 1e-3
+    with pytest.raises(AssertionError):
+        agrees(biased)
 
 
 def test_coverage_of_known_ranks():
