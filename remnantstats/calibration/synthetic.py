@@ -242,7 +242,7 @@ def survey_table(
         detected = outcome.outcome == DETECTED
         noise = channel.width if channel.threshold_on == "measured" else channel.error
         table[name] = outcome.outcome
-        table[names.value] = np.round(outcome.value, 4)
+        table[names.value] = _rounded(outcome.value, channel.limit)
         table[names.error] = np.where(detected, np.round(noise, 4), np.nan)
         table[names.calibration] = np.where(detected, np.round(channel.calibration, 4), np.nan)
         quoted = channel.limit + channel.width * midpoint_shift(channels[name])
@@ -260,6 +260,14 @@ def survey_table(
         if column in table
     ]
     return table.drop(columns=unused).dropna(axis=1, how="all")
+
+
+def _rounded(value: FloatArray, limit: FloatArray) -> FloatArray:
+    """Round to four decimals, but up where a value above its limit would otherwise fall to it."""
+    plain = np.round(value, 4)
+    with np.errstate(invalid="ignore"):
+        falls = (value > limit) & (plain <= limit)
+    return np.where(falls, np.ceil(value * 1e4) / 1e4, plain)
 
 
 def _star_truth(table: pd.DataFrame, drawn: Simulated) -> list[dict[str, Any]]:

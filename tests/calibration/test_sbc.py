@@ -11,9 +11,11 @@ import scipy.stats
 
 from remnantstats.calibration import CalibrationReport, Design, calibrate, sbc
 from remnantstats.calibration.builtin import builtin_table
+from remnantstats.calibration.synthetic import posed_design, survey_table
 from remnantstats.catalog import ChannelRules, RowRules, read_sample
 from remnantstats.population import load_model, model_names
-from remnantstats.sensitivity import ChannelSettings
+from remnantstats.population.simulate import ChannelOutcome, Simulated
+from remnantstats.sensitivity import ChannelSettings, midpoint_shift
 
 
 def agrees(report, share=0.95):
@@ -111,3 +113,20 @@ def test_truth_can_be_held():
     report = calibrate(load_model("steady"), surveys=4, stars=100, seed=1, truth={"debris_fraction": 0.3})
     held = report.ranks[report.ranks["quantity"] == "debris_fraction"]
     assert (held["truth"] == 0.3).all() and len(held) == 4 - report.refused
+
+
+@pytest.mark.parametrize("efficiency", [None, 0.7])
+def test_values_just_above_their_limit_stay_above_it_when_written(efficiency):
+    """Four decimals are written; a value 2e-6 dex above its limit must not fall to it: the reader would refuse it."""
+    channels = {"pollution": ChannelSettings(limit_efficiency=efficiency)}
+    rng = np.random.default_rng(0)
+    rules = RowRules(pollution=ChannelRules(midpoint_shift=midpoint_shift(channels["pollution"])))
+    base = read_sample(builtin_table(rng, 500, False), rules=rules)
+    problem, rows, table, _ = posed_design(load_model("steady"), 500, rng, Design(base, channels))
+    # limits with more decimals than are written
+    rows = replace(rows, channels={"pollution": replace(rows.channels["pollution"], limit=rng.uniform(6, 8, 500))})
+    close, yes = rows.channels["pollution"].limit + 2e-6, np.ones(500, dtype=bool)
+    outcome = ChannelOutcome(np.full(500, "detected"), close, yes, close)
+    written = survey_table(rows, table, Simulated({"pollution": outcome}, yes, yes), channels)
+    assert np.abs(written["log_accretion"] - close).max() <= 1e-4
+    assert len(read_sample(written, rules=problem.sample.rules)) == 500
