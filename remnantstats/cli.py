@@ -182,7 +182,8 @@ def simulate(
 
         progress("drawing")
         given = {} if truth is None else read_toml(truth, "file of true parameters")
-        survey = draw_survey(load_model(model), stars, seed, design=_design(design), truth=given)
+        where = "the truth" if truth is None else str(truth)
+        survey = draw_survey(load_model(model), stars, seed, design=_design(design), truth=given, where=where)
         progress("writing")
         files = write_survey(survey, out)
         progress.close()

@@ -172,6 +172,8 @@ class Study:
             "settings": self.file.model.model_dump(mode="json"),
             "sample": self.file.sample.model_dump(mode="json"),
             "seed": self.file.seed,
+            # sampling went on until every reported quantity had converged, so what is reported is part of the draws
+            "thresholds": self.file.thresholds.model_dump(mode="json"),
             "recoveries": {name: [item.value.tolist(), item.injected.tolist(), item.recovered.tolist(), item.labels]
                            for name, item in self.recoveries.items()},
             **parts,

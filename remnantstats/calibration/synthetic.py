@@ -122,7 +122,9 @@ def _builtin(model: PopulationModel, stars: int, rng: np.random.Generator) -> De
     return Design(sample, channels, "survey" if model.file.groups else None)
 
 
-def draw_truth(problem: Problem, rng: np.random.Generator, given: Mapping[str, float]) -> dict[str, Any]:
+def draw_truth(
+    problem: Problem, rng: np.random.Generator, given: Mapping[str, float], where: str = "the truth"
+) -> dict[str, Any]:
     """Parameters of a synthetic population: those given, the rest drawn from their priors.
 
     Parameters
@@ -130,6 +132,8 @@ def draw_truth(problem: Problem, rng: np.random.Generator, given: Mapping[str, f
     problem : Problem
     rng : numpy.random.Generator
     given : mapping of str to float
+    where : str
+        Where the given values come from, for messages.
 
     Returns
     -------
@@ -147,17 +151,24 @@ def draw_truth(problem: Problem, rng: np.random.Generator, given: Mapping[str, f
             raise ModelError(
                 Fault(
                     f"the model has no parameter '{name}'",
-                    where="the truth",
+                    where=where,
                     found=name,
                     allowed=", ".join(known),
                     remedy=nearest(name, known),
                 )
             )
         low, high = problem.parameter(name).limits
-        if not (isinstance(value, int | float) and low <= value <= high):
+        # a truth value is no number, though the language counts it as one
+        number = isinstance(value, int | float) and not isinstance(value, bool)
+        if not (number and low <= value <= high):
             raise ModelError(
-                Fault("the true value is outside the parameter's range", where=f"the truth, '{name}'",
-                      found=str(value), allowed=f"{low:g} to {high:g}", remedy="change it")
+                Fault(
+                    "the true value is no number, or outside the parameter's range",
+                    where=f"{where}, key '{name}'",
+                    found=repr(value),
+                    allowed=f"{low:g} to {high:g}",
+                    remedy="change it",
+                )
             )
     theta: dict[str, Any] = {}
     for item in problem.parameters:
@@ -179,6 +190,7 @@ def draw_survey(
     *,
     design: Design | None = None,
     truth: Mapping[str, float] | None = None,
+    where: str = "the truth",
 ) -> SyntheticSurvey:
     """Draw a synthetic survey.
 
@@ -189,6 +201,8 @@ def draw_survey(
     seed : int
     design : Design, optional
     truth : mapping of str to float, optional
+    where : str, optional
+        Where the truth comes from, for messages.
 
     Returns
     -------
@@ -196,7 +210,7 @@ def draw_survey(
     """
     rng = np.random.default_rng([seed, 21])
     problem, rows, base, channels = posed_design(model, stars, rng, design)
-    theta = draw_truth(problem, rng, truth or {})
+    theta = draw_truth(problem, rng, truth or {}, where)
     drawn = simulate(rng, problem, rows, theta)
     table = survey_table(rows, base, drawn, channels)
     values = {key: value for key, value in theta.items() if np.ndim(value) == 0 and not key.startswith("logit(")}

@@ -206,7 +206,7 @@ def influence_check(pareto_k: FloatArray, stars: Sequence[str]) -> Check:
     """Check of single stars' influence, by leave-one-out Pareto k̂."""
     high = np.flatnonzero(pareto_k > LIMITS.pareto_k)
     named = ", ".join(stars[i] for i in high[np.argsort(-pareto_k[high])][:5])
-    text = f"{high.size} stars move the posterior much: {named}"
+    text = f"stars that move the posterior much: {high.size} ({named})"
     if not high.size:
         text = "no single star moves the posterior much"
     worst = float(np.max(pareto_k)) if pareto_k.size else 0.0

@@ -26,7 +26,6 @@ __all__ = ["CHAINS", "NutsDraws", "NutsSampler"]
 FloatArray = npt.NDArray[np.float64]
 CHAINS = 4
 _TUNE = 600
-#: first attempt; doubled until the targets are met
 _CORES = 2
 
 

@@ -109,7 +109,7 @@ def simulate(rng: np.random.Generator, problem: Problem, rows: Rows, theta: Mapp
             )
         )
     listed = {
-        name: _listed(rng, channel, hosts.truth[name], hosts.present(name), noise[name], rows.blind)
+        name: _listed(rng, channel, hosts.truth[name], hosts.present(name), noise[name])
         for name, channel in rows.channels.items()
     }
     return Simulated(listed, hosts.has_debris, hosts.has_dust)
@@ -194,7 +194,6 @@ def _listed(
     truth: FloatArray,
     present: BoolArray,
     noise: FloatArray,
-    blind: BoolArray,
 ) -> ChannelOutcome:
     """Apply a channel's selection, its noise and its spurious detections."""
     size = len(truth)

@@ -191,6 +191,7 @@ def test_simulate_with_given_truth(tmp_path):
         ("debris_fracton = 0.25", "did you mean 'debris_fraction'?"),
         ("debris_fraction = 1.5", "outside the parameter's range"),
         ("debris_fraction = 'half'", "half"),
+        ("debris_fraction = true", "True"),
         ("debris_fraction = ", "truth.toml"),
     ],
 )
@@ -199,7 +200,7 @@ def test_simulate_refuses_a_faulty_truth(line, word, tmp_path):
     truth.write_text(line + "\n", encoding="utf-8")
     result = invoke("simulate", "steady", "--stars", 9, "--seed", 3, "--truth", truth, "--out", tmp_path / "drawn")
     assert result.exit_code == 2
-    assert word in result.stderr
+    assert word in result.stderr and "truth.toml" in result.stderr
     assert not (tmp_path / "drawn").exists()
 
 

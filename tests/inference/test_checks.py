@@ -113,7 +113,7 @@ def test_influence():
     stars = ["Ash", "Birch", "Cedar"]
     assert checks.influence_check(np.array([0.1, 0.7, 0.3]), stars).verdict == "pass"
     check = checks.influence_check(np.array([0.71, 0.2, 0.9]), stars)
-    assert check.verdict == "warn" and "2 stars" in check.message
+    assert check.verdict == "warn" and "posterior much: 2 (" in check.message
     assert "Cedar, Ash" in check.message and "Birch" not in check.message
 
 

@@ -312,6 +312,7 @@ def test_draws_are_kept_under_all_they_depend_on(done, tmp_path):
         key("[pollution]", '[pollution]\nthreshold_on = "true"'),
         key('name = "steady"', 'name = "steady"\natmospheres = ["H", "He"]'),
         key("[pollution]", '[model.priors]\nsd_log_accretion = { family = "halfnormal", sd = 1 }\n[pollution]'),
+        key("[pollution]", "[thresholds]\nlog_accretion = [6.5]\n[pollution]"),
         key(versions="2"),
         key(table="b"),
     ]
